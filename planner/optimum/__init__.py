@@ -1,0 +1,1 @@
+"""The Bellman recursion and its grids: Problem -> Policy."""

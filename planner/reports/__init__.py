@@ -1,0 +1,1 @@
+"""What is said (sections, wording) and how it is drawn (pdf, terminal, export)."""

@@ -1,0 +1,1 @@
+"""The client workbook: its declaration, reader and writer."""
