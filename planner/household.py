@@ -6,14 +6,18 @@ nominal. Shares and rates are fractions (0.04). Ages are years, possibly fractio
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from datetime import date
 from enum import StrEnum
 from typing import Literal
 
+from planner.diagnostics import Diagnostic, InputError
+
 Sex = Literal["female", "male"]
 JOINT = "joint"
 LARGER_OF_THE_TWO = "larger of the two"
+BEST_EACH_YEAR = "best each year"
 
 
 class AccountType(StrEnum):
@@ -327,3 +331,41 @@ class Household:
     def is_couple(self) -> bool:
         """Two people."""
         return len(self.people) == 2
+
+    def __post_init__(self) -> None:
+        """Refuse a household that breaks a rule, with every problem at once."""
+        found = tuple(problems(self))
+        if any(problem.severity == "error" for problem in found):
+            raise InputError(found)
+
+
+def problems(household: Household) -> Iterator[Diagnostic]:
+    """Yield every problem of a household: errors and, for what is merely unusual, warnings.
+
+    Each carries a field path such as ``accounts[0].owner``; codes are listed in `planner.codes`.
+    """
+    from planner.household_rules import household_problems  # local: the rules import these classes
+
+    yield from household_problems(household)
+
+
+def risk_aversion_from_gambles(accepts_third_cut: bool, accepts_second_gamble: bool) -> float:
+    """Relative risk aversion from two questions about lifetime income.
+
+    A job doubles income for life or cuts it by a third, at even odds: take it? Then the same with
+    a cut by half (after yes) or by a fifth (after no).
+
+    Returns
+    -------
+    float
+        5 (no, no), 2.7 (no, yes), 1.4 (yes, no) or 0.8 (yes, yes): our stand-ins for the groups
+        "above 3.76", "2 to 3.76", "1 to 2" and "below 1".
+
+    References
+    ----------
+    Barsky, Juster, Kimball & Shapiro (1997), Preference parameters and behavioral heterogeneity,
+    Quarterly Journal of Economics 112(2), table I (the groups; from memory).
+    """
+    if accepts_third_cut:
+        return 0.8 if accepts_second_gamble else 1.4
+    return 2.7 if accepts_second_gamble else 5.0
