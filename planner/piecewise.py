@@ -348,8 +348,8 @@ def rate_and_room(function: PiecewiseLinear, at: float) -> tuple[float, float]:
     reach = at + 1e-9 * max(1.0, abs(at))
     segment = int(np.searchsorted(pruned.x, reach, side="right")) - 1
     rate = float(pruned.slopes[segment])
-    at_jump = segment > 0 and pruned.x[segment - 1] == pruned.x[segment] and pruned.x[segment] >= at - (reach - at)
-    if at_jump:
+    place = pruned.x[segment]
+    if segment > 0 and pruned.x[segment - 1] == place and place >= at - (reach - at):
         return rate, 0.0
     if segment + 1 == pruned.x.size:
         return rate, float("inf")
