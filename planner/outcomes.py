@@ -1,0 +1,335 @@
+"""Measures of simulated paths: pure functions of arrays.
+
+Utilities, level spending and the wealth cost of a strategy; chance, size and time of falling
+below essential spending; percentiles over paths with someone alive. Standard errors treat paths
+as independent; with stratified draws they are on the safe side (see `simulation.uniform_draws`).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.optimize import brentq
+
+from planner.piecewise import FloatArray
+from planner.preferences import SpendingUtility
+from planner.problem import IntArray, Problem
+from planner.simulation import Paths
+
+BoolArray = NDArray[np.bool_]
+
+HALF_CENT = 0.005
+"""Spending is short where it is less than this below what is needed."""
+
+LEVELS = (0.1, 0.5, 0.9)
+"""Percentile levels printed in plans."""
+
+
+@dataclass(frozen=True, slots=True)
+class Estimate:
+    """A value estimated from paths, and its standard error."""
+
+    value: float
+    standard_error: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Percentiles:
+    """Percentiles with standard errors.
+
+    Attributes
+    ----------
+    levels : tuple of float
+        0.1 = in one of ten cases less than.
+    values, standard_errors : ndarray of shape (n_levels,) or (n_levels, n_years)
+        NaN in a year without any path.
+    count : ndarray of int, shape () or (n_years,)
+        Number of paths behind each.
+    """
+
+    levels: tuple[float, ...]
+    values: FloatArray
+    standard_errors: FloatArray
+    count: IntArray
+
+
+@dataclass(frozen=True, slots=True)
+class Shortfall:
+    """Spending below essential, over paths.
+
+    Attributes
+    ----------
+    chance : Estimate
+        That in some year with someone alive spending is below essential.
+    years : Estimate
+        Mean number of such years, over all paths.
+    years_when_short : float
+        Mean number over the paths that have any; 0 where none has.
+    amount_a_year : float
+        Mean amount short, over the short years.
+    total_when_short : float
+        Mean total short, over the paths that have any.
+    mostly_from_year : int or None
+        Latest year t such that at least 80 % of short years are year t or later.
+    """
+
+    chance: Estimate
+    years: Estimate
+    years_when_short: float
+    amount_a_year: float
+    total_when_short: float
+    mostly_from_year: int | None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Outcomes:
+    """What a strategy does for a household, from one set of paths.
+
+    Attributes
+    ----------
+    utility : Estimate
+        L, expected discounted utility, estate included.
+    level_spending : float or None
+        Worth a steady income of; None where a legacy is wished.
+    spending_this_year : float
+    shortfall : Shortfall
+    spending, balance : Percentiles
+        By year, over paths with someone alive; balance = all accounts at the opening.
+    estate, tax_total, largest_cut : Percentiles
+        Over all paths; estate after heirs' tax.
+    tax_total_mean : Estimate
+    exhausted : Estimate
+        Chance that savings are used up while someone lives on.
+    """
+
+    utility: Estimate
+    level_spending: float | None
+    spending_this_year: float
+    shortfall: Shortfall
+    spending: Percentiles
+    balance: Percentiles
+    estate: Percentiles
+    tax_total: Percentiles
+    largest_cut: Percentiles
+    tax_total_mean: Estimate
+    exhausted: Estimate
+
+
+# Value ------------------------------------------------------------------------------------------
+
+
+def path_utilities(problem: Problem, paths: Paths) -> FloatArray:
+    r"""Discounted utility of each path, (n_paths,).
+
+    :math:`\sum_{t \text{ alive}} \beta^t n_t f(c_t / n_t) + \beta^{\tau + 1} v(b)`, with tau the
+    last year that opens with someone alive and b the estate left at its end.
+    """
+    need = need_on_paths(problem, paths)
+    total = np.zeros(paths.n_paths)
+    for t in range(paths.n_years):
+        here = np.flatnonzero(paths.alive[:, t])
+        n = need[here, t]
+        total[here] += problem.discount**t * n * problem.utility.value(paths.spending[here, t] / n)
+    if problem.estate.wanted:
+        total += problem.discount ** (paths.death_year + 1.0) * problem.estate.value(paths.estate)
+    return total
+
+
+def mean_estimate(values: FloatArray) -> Estimate:
+    """Mean of independent values (n_paths,), with standard error sd / sqrt(n)."""
+    n = values.size
+    error = float(values.std(ddof=1)) / n**0.5 if n > 1 else float("nan")
+    return Estimate(float(values.mean()), error)
+
+
+def utility_difference(utilities: FloatArray, reference: FloatArray) -> Estimate:
+    """L - L_reference on the same scenarios: the standard error is of the paired differences."""
+    return mean_estimate(utilities - reference)
+
+
+def level_spending(utility: SpendingUtility, value: float, normaliser: float) -> float:
+    """Level spending equivalent f^-1(L / A_0); it has a meaning only where no legacy is wished.
+
+    Parameters
+    ----------
+    value : float
+        L.
+    normaliser : float
+        A_0: the expected sum of discounted need scales, see `need_normaliser`.
+    """
+    return float(utility.inverse(value / normaliser))
+
+
+def need_normaliser(problem: Problem) -> float:
+    """A_0 without legacy: A_t(h) = n + beta sum_h' P(h -> h') A_{t+1}(h'), at t = 0, status 0."""
+    following = np.zeros(problem.n_statuses)
+    for t in reversed(range(problem.n_years)):
+        following = problem.need[t] + problem.discount * problem.transition[t] @ following
+    return float(following[0])
+
+
+def wealth_cost(value_at_scale: Callable[[float], float], difference: float, wealth: float) -> float:
+    """D that solves V_0((1 - D / W0) x) = V_0(x) + difference, in money.
+
+    Parameters
+    ----------
+    value_at_scale : callable
+        s -> V_0(s x), the optimum's value with all accounts multiplied by s; increasing.
+    difference : float
+        L_rule - L_optimum on the same scenarios, or minus a gap.
+    wealth : float
+        W0 = x1 + x2 + x3.
+
+    Returns
+    -------
+    float
+        W0 where the strategy is worth less than no savings at all. Below 0 where the difference
+        is above 0 (sampling error): then D is at least -W0.
+    """
+    if difference == 0 or wealth <= 0:
+        return 0.0
+    target = value_at_scale(1.0) + difference
+    low, high = (0.0, 1.0) if difference < 0 else (1.0, 2.0)
+    if value_at_scale(low) >= target:
+        return (1 - low) * wealth
+    if value_at_scale(high) <= target:
+        return (1 - high) * wealth
+    # 1e-12 of wealth is below a cent for any client; V_0 is steep near 0, which bisection steps bear.
+    scale = brentq(lambda s: value_at_scale(s) - target, low, high, xtol=1e-12, rtol=1e-12)
+    return (1 - float(scale)) * wealth
+
+
+# Essential spending -----------------------------------------------------------------------------
+
+
+def need_on_paths(problem: Problem, paths: Paths) -> FloatArray:
+    """Need scale n of each path and year, (n_paths, n_years); 0 where nobody is alive."""
+    with_nobody = np.column_stack([problem.need, np.zeros(problem.n_years)])
+    return np.take_along_axis(with_nobody.T, paths.status.astype(np.int64), axis=0)
+
+
+def amount_short(spending: FloatArray, essential: FloatArray, alive: BoolArray) -> FloatArray:
+    """How far spending is below essential (n E), 0 within half a cent; all (n_paths, n_years)."""
+    short = np.where(alive, essential - spending, 0.0)
+    return np.where(short > HALF_CENT, short, 0.0)
+
+
+def shortfall(short: FloatArray) -> Shortfall:
+    """Measures of the amounts short (n_paths, n_years), as `amount_short` gives them."""
+    below = short > 0
+    years = below.sum(axis=1).astype(np.float64)
+    n_short = int((years > 0).sum())
+    n_years_short = int(below.sum())
+    if n_short == 0:
+        return Shortfall(chance(years > 0), mean_estimate(years), 0.0, 0.0, 0.0, None)
+    total = float(short.sum())
+    at_or_after = below.sum(axis=0)[::-1].cumsum()[::-1]
+    return Shortfall(
+        chance=chance(years > 0),
+        years=mean_estimate(years),
+        years_when_short=n_years_short / n_short,
+        amount_a_year=total / n_years_short,
+        total_when_short=total / n_short,
+        mostly_from_year=int(np.flatnonzero(at_or_after >= 0.8 * n_years_short)[-1]),
+    )
+
+
+def chance(happened: BoolArray) -> Estimate:
+    """Share of paths (n_paths,) on which something happened.
+
+    Standard error sqrt(p' (1 - p') / n) with p' = (k + 1) / (n + 2), so that a thing that was
+    never seen in n paths is not reported as certain.
+    """
+    n, k = happened.size, int(happened.sum())
+    smoothed = (k + 1) / (n + 2)
+    return Estimate(k / n, (smoothed * (1 - smoothed) / n) ** 0.5)
+
+
+# Percentiles ------------------------------------------------------------------------------------
+
+
+def percentiles(values: FloatArray, levels: Sequence[float] = LEVELS) -> Percentiles:
+    """Percentiles of values (n,).
+
+    Linear between order statistics. The standard error is half the distance between the order
+    statistics at levels p - e and p + e, e = sqrt(p (1 - p) / n): the number of values below the
+    true percentile is binomial, so these ranks are one standard deviation away. Free of any
+    assumption on the law of the values.
+    """
+    wanted = np.asarray(levels, dtype=np.float64)
+    nothing = np.full(wanted.shape, np.nan)
+    n = values.size
+    if n == 0:
+        return Percentiles(tuple(levels), nothing, nothing.copy(), np.array(0))
+    spread = np.sqrt(wanted * (1 - wanted) / n)
+    around = np.concatenate([wanted, np.maximum(wanted - spread, 0.0), np.minimum(wanted + spread, 1.0)])
+    middle, low, high = np.quantile(values, around).reshape(3, -1)
+    return Percentiles(tuple(levels), middle, (high - low) / 2, np.array(n))
+
+
+def yearly_percentiles(values: FloatArray, alive: BoolArray, levels: Sequence[float] = LEVELS) -> Percentiles:
+    """Percentiles by year over paths with someone alive; values, alive (n_paths, n_years)."""
+    years = [percentiles(values[alive[:, t], t], levels) for t in range(values.shape[1])]
+    return Percentiles(
+        levels=tuple(levels),
+        values=np.stack([year.values for year in years], axis=1),
+        standard_errors=np.stack([year.standard_errors for year in years], axis=1),
+        count=np.array([int(year.count) for year in years]),
+    )
+
+
+# Cuts and how long it lasts ---------------------------------------------------------------------
+
+
+def largest_cut(spending: FloatArray, need: FloatArray, alive: BoolArray) -> FloatArray:
+    """Largest fall of spending from one year to the next on each path, a share; (n_paths,).
+
+    1 - (c_{t+1} / n_{t+1}) / (c_t / n_t), at least 0: spending at an unchanged need scale, so a
+    survivor's smaller need is no cut. Years that follow spending of nothing are left out.
+    """
+    with np.errstate(divide="ignore", invalid="ignore"):
+        level = spending / need
+        cut = 1 - level[:, 1:] / level[:, :-1]
+    counts = alive[:, 1:] & alive[:, :-1] & (spending[:, :-1] > HALF_CENT)
+    return np.where(counts, cut, 0.0).max(axis=1, initial=0.0)
+
+
+def exhausted_year(balances: FloatArray, alive: BoolArray) -> IntArray:
+    """First year that opens with someone alive and savings used up; n_years where there is none.
+
+    Parameters
+    ----------
+    balances : ndarray of shape (n_paths, n_years)
+        All accounts together at the opening of each year.
+    """
+    empty = alive & (balances < HALF_CENT)
+    return np.where(empty.any(axis=1), empty.argmax(axis=1), balances.shape[1])
+
+
+def measure(problem: Problem, paths: Paths, levels: Sequence[float] = LEVELS) -> Outcomes:
+    """All measures of one strategy's paths."""
+    utility = mean_estimate(path_utilities(problem, paths))
+    need = need_on_paths(problem, paths)
+    balance = paths.balances[:, :-1].sum(axis=2)
+    short = amount_short(paths.spending, need * problem.utility.essential, paths.alive)
+    tax_total = paths.tax.sum(axis=1)
+    return Outcomes(
+        utility=utility,
+        level_spending=(
+            None
+            if problem.estate.wanted
+            else level_spending(problem.utility, utility.value, need_normaliser(problem))
+        ),
+        spending_this_year=float(paths.spending[:, 0].mean()),
+        shortfall=shortfall(short),
+        spending=yearly_percentiles(paths.spending, paths.alive, levels),
+        balance=yearly_percentiles(balance, paths.alive, levels),
+        estate=percentiles(paths.estate, levels),
+        tax_total=percentiles(tax_total, levels),
+        largest_cut=percentiles(largest_cut(paths.spending, need, paths.alive), levels),
+        tax_total_mean=mean_estimate(tax_total),
+        exhausted=chance(exhausted_year(balance, paths.alive) < paths.n_years),
+    )
