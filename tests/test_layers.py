@@ -21,7 +21,7 @@ LAYERS = (
     ("planner.plan",),
     ("planner.instructions", "planner.projection"),
     ("planner.plan_record",),
-    ("planner.rules",),
+    ("planner.rules", "planner.banded"),
     ("planner.outcomes",),
     ("planner.optimum",),
     ("planner.simulation",),
