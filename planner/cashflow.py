@@ -10,6 +10,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import ArrayLike
 
 from planner.piecewise import FloatArray, PiecewiseLinear
 from planner.problem import TAX_DEFERRED, TAX_FREE, TAXABLE, Decision, IntArray, Problem, State
@@ -159,7 +160,8 @@ def withdraw_for_spending(
     """(w2, spending) that reach a target of spending after tax, as far as the money goes.
 
     Income above the target stays in taxable. Same order of accounts as `withdraw_gross`, so w2
-    is the least withdrawal whose cash after tax covers what income and taxable do not.
+    is the least withdrawal, from the minimum distribution on, whose cash after tax covers what
+    income and taxable do not. Where none does, everything accessible is withdrawn.
     """
     x = state.balances
     minimum, accessible = withdrawal_range(problem, t, state)
@@ -169,8 +171,8 @@ def withdraw_for_spending(
     for h, tax in enumerate(problem.tax[t]):
         here = state.status == h
         if here.any():
-            withdraw[here] = least_withdrawal(tax, target[here] - cash[here])
-    withdraw = np.clip(withdraw, minimum, accessible)
+            withdraw[here] = least_withdrawal(tax, target[here] - cash[here], minimum[here])
+    withdraw = np.minimum(withdraw, accessible)
     available = cash + withdraw - tax_due(problem, t, state.status, withdraw) + x[:, TAX_FREE]
     return withdraw, np.minimum(target, available)
 
@@ -183,19 +185,25 @@ def withdrawal_range(problem: Problem, t: int, state: State) -> tuple[FloatArray
     ] * balance
 
 
-def least_withdrawal(tax: PiecewiseLinear, net: FloatArray) -> FloatArray:
-    """Least w >= 0 with w - T(w) >= net (any shape); the last marginal rate must be below 1."""
+def least_withdrawal(tax: PiecewiseLinear, net: ArrayLike, at_least: ArrayLike = 0.0) -> FloatArray:
+    """Least w >= at_least with w - T(w) >= net; arguments broadcast.
+
+    Exact for any piecewise-linear tax, jumps and rates above 1 included: cash after tax may fall
+    and be regained, so segments are tried in order. The last marginal rate must be below 1.
+    """
     if tax.last_slope >= 1:
         raise ValueError("no withdrawal raises cash where the last marginal rate is 1 or more")
-    # One knot beyond every net asked for makes the last segment finite.
-    reach = (np.max(net, initial=0.0) + float(tax.y[-1]) + 1.0) / (1.0 - tax.last_slope)
-    end = float(tax.x[-1]) + abs(reach)
-    w = np.append(tax.x, end)
-    kept = w - np.append(tax.y, float(tax(end)))
-    best = np.maximum.accumulate(kept)
-    # Where cash after tax has fallen (a jump, a rate above 1) it regains its old best inside a later
-    # segment: start the inverse there.
-    for k in np.flatnonzero((kept[:-1] < best[:-1]) & (kept[1:] > best[:-1])):
-        share = (best[k] - kept[k]) / (kept[k + 1] - kept[k])
-        w[k] += share * (w[k + 1] - w[k])
-    return np.asarray(np.interp(net, best, w))
+    net, start = np.broadcast_arrays(np.asarray(net, np.float64), np.asarray(at_least, np.float64))
+    w = start.copy()
+    short = w - tax(w) < net
+    for left, right, paid, slope in zip(tax.x, np.append(tax.x[1:], np.inf), tax.y, tax.slopes, strict=True):
+        if not short.any():
+            break
+        if slope >= 1 or right <= left:
+            continue
+        crossing = left + (net - (left - paid)) / (1 - slope)
+        found = short & (crossing <= right) & (start < right)
+        # Never past the right end, where a jump may wait.
+        w = np.where(found, np.clip(crossing, np.maximum(left, start), right), w)
+        short &= ~found
+    return w
