@@ -1,0 +1,134 @@
+"""The solved policy: values and choices on the nodes, read off between them."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from planner.optimum.grids import LogGrid, lagrange_matrix
+from planner.piecewise import FloatArray
+from planner.preferences import SpendingUtility
+from planner.problem import TAX_DEFERRED, TAX_FREE, Decision, IntArray, Problem, State
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class OptimalPolicy:
+    """What the recursion found; a `Policy`.
+
+    Attributes
+    ----------
+    grids : three LogGrid
+        Nodes of taxable, tax-deferred, tax-free.
+    level : ndarray of shape (n_years, n_statuses, n1, n2, n3)
+        C = g^-1(V / A) at opening balances, money a year.
+    gross : same shape
+        g = w2 + k, money taken out of tax-deferred.
+    spending : same shape
+        c, money a year after tax.
+    cash_price : same shape
+        Marginal value of cash on hand, V's slope along cash, utility per unit of money.
+    portfolio : ndarray of int, same shape
+        Best portfolio at *closing* balances y (after the year's choices) on the same nodes.
+    weights : ndarray of shape (n_years, n_statuses)
+        A_t(h).
+    smooth, utility : SpendingUtility
+        g (no kink at essential spending) and f.
+    """
+
+    grids: tuple[LogGrid, LogGrid, LogGrid]
+    level: FloatArray
+    gross: FloatArray
+    spending: FloatArray
+    cash_price: FloatArray
+    portfolio: IntArray
+    weights: FloatArray
+    smooth: SpendingUtility
+    utility: SpendingUtility
+
+    @property
+    def name(self) -> str:
+        """Name for people."""
+        return "the best plan"
+
+    @property
+    def reference(self) -> str:
+        """Where it was published."""
+        return "Bellman (1957), Dynamic Programming: principle of optimality"
+
+    @property
+    def n_memory(self) -> int:
+        """No memory: the state is enough."""
+        return 0
+
+    def certainty_equivalent(self, balances: FloatArray, t: int = 0, status: int = 0) -> FloatArray:
+        """C_t(x, h) at balances (n, 3): 4-point Lagrange along each axis; (n,)."""
+        rows = [lagrange_matrix(grid.nodes, balances[:, i]) for i, grid in enumerate(self.grids)]
+        return np.einsum("ni,nj,nk,ijk->n", *rows, self.level[t, status], optimize=True)
+
+    def value(self, balances: FloatArray, t: int = 0, status: int = 0) -> FloatArray:
+        """V_t(x, h), expected utility from year t on, at balances (n, 3); (n,)."""
+        return self.weights[t, status] * self.smooth.value(self.certainty_equivalent(balances, t, status))
+
+    def level_spending(self, balances: FloatArray) -> float:
+        """f^-1(V_0 / A_0): steady spending worth as much (meaningful without a legacy)."""
+        return float(self.utility.inverse(self.value(balances[None, :])[0] / self.weights[0, 0]))
+
+    def decide(self, problem: Problem, t: int, state: State) -> Decision:
+        """Choices at any balances: linear between the nodes; see the module docstring."""
+        n = state.status.size
+        gross, spending = np.empty(n), np.empty(n)
+        portfolio = np.empty(n, dtype=np.int64)
+        withdraw, convert = np.empty(n), np.zeros(n)
+        for h in range(problem.n_statuses):
+            here = np.flatnonzero(state.status == h)
+            if not here.size:
+                continue
+            x = state.balances[here]
+            corner, weight = self._corners(x)
+            gross[here] = (self.gross[t, h].ravel()[corner] * weight).sum(axis=0)
+            spending[here] = (self.spending[t, h].ravel()[corner] * weight).sum(axis=0)
+            withdraw[here], convert[here], y = settle(problem, t, h, x, gross[here], spending[here])
+            corner, weight = self._corners(y)
+            choice = (self.portfolio[t, h].ravel()[corner] * weight).sum(axis=0)
+            portfolio[here] = np.rint(choice).astype(np.int64)
+        return Decision(withdraw, convert, spending, portfolio, np.zeros((n, 0)))
+
+    def _corners(self, balances: FloatArray) -> tuple[IntArray, FloatArray]:
+        """Flat node indices and weights of the enclosing cell: (8, n) or fewer for absent accounts."""
+        index = np.zeros((1, balances.shape[0]), dtype=np.int64)
+        weight = np.ones((1, balances.shape[0]))
+        for i, grid in enumerate(self.grids):
+            index = index * grid.size
+            if grid.size == 1:
+                continue
+            k = grid.cell(balances[:, i])
+            share = (balances[:, i] - grid.nodes[k]) / (grid.nodes[k + 1] - grid.nodes[k])
+            share = np.clip(share, 0.0, None)
+            index = np.concatenate([index + k, index + k + 1])
+            weight = np.concatenate([weight * (1 - share), weight * share])
+        return index, weight
+
+
+def settle(
+    problem: Problem, t: int, h: int, balances: FloatArray, gross: FloatArray, spending: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Split g into withdrawal and conversion: (w2, k, balances after the choices (n, 3)).
+
+    Without conversions w2 = g. With them w2 is what spending needs from tax-deferred, at least
+    the minimum distribution, and the rest is converted.
+    """
+    x2 = balances[:, TAX_DEFERRED]
+    least = problem.minimum_share[t, h] * x2
+    gross = np.clip(gross, least, problem.accessible_share[t, h] * x2)
+    tax = problem.tax[t][h](gross)
+    cash = balances[:, 0] + problem.income[t, h] - tax
+    if problem.conversions:
+        withdraw = np.clip(spending - cash, least, gross)
+    else:
+        withdraw = gross
+    convert = gross - withdraw
+    left = cash + withdraw - spending
+    y1 = np.maximum(left, 0.0)
+    y3 = np.maximum(balances[:, TAX_FREE] + convert + np.minimum(left, 0.0), 0.0)
+    return withdraw, convert, np.stack([y1, np.maximum(x2 - gross, 0.0), y3], axis=1)

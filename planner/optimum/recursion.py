@@ -1,0 +1,190 @@
+r"""The Bellman recursion, backwards over years: Problem -> OptimalPolicy.
+
+.. math::
+    J_t(y, h) &= \max_p E\Big[\sum_{h'} P(h \to h')\, V_{t+1}(y R_p, h') + P(h \to none)\, v(y R_p)\Big] \\
+    V_t(x, h) &= \max_{w_2, k, c} n f(c/n) + \beta J_t(y, h)
+
+Values are carried as certainty equivalents C = g^-1(V/A), nearly linear in wealth; A_t(h) =
+n + beta (sum_h' P A_{t+1} + P(none) a [legacy]). g is the utility without its kink at essential
+spending, so that the kink of the year's utility does not become a kink of C in wealth.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from planner.optimum.expectation import GrowthMaps, expected_value, growth_maps
+from planner.optimum.grids import CashGrid, LogGrid, derivative_matrix
+from planner.optimum.inner import Continuation, Felicity, cash_table
+from planner.optimum.outer import Outer, Situation, Surface
+from planner.optimum.policy import OptimalPolicy
+from planner.piecewise import FloatArray
+from planner.problem import Problem
+
+
+@dataclass(frozen=True, slots=True)
+class SolverSettings:
+    """Grid sizes: nodes for taxable, tax-deferred, tax-free and cash; tops as multiples of wealth."""
+
+    taxable: int = 16
+    tax_deferred: int = 16
+    tax_free: int = 10
+    cash: int = 60
+    top: float = 6.0
+
+    def scaled(self, factor: float) -> SolverSettings:
+        """The same with every grid `factor` times as fine."""
+        return replace(
+            self,
+            taxable=int(round(factor * (self.taxable - 1))) + 1,
+            tax_deferred=int(round(factor * (self.tax_deferred - 1))) + 1,
+            tax_free=int(round(factor * (self.tax_free - 1))) + 1,
+            cash=int(round(factor * self.cash)),
+        )
+
+
+def value_weights(problem: Problem) -> tuple[FloatArray, FloatArray]:
+    """A_t(h) and the weight of J: arrays (n_years, n_statuses).
+
+    A_t = n + beta (sum_h' P A_{t+1} + P(none) a [legacy]); the second array is the bracket.
+    """
+    n_years, n_statuses = problem.need.shape
+    weight = np.zeros((n_years + 1, n_statuses))
+    later = np.zeros((n_years, n_statuses))
+    strength = problem.estate.strength if problem.estate.wanted else 0.0
+    for t in range(n_years - 1, -1, -1):
+        later[t] = problem.transition[t] @ weight[t + 1] + problem.death[t] * strength
+        weight[t] = problem.need[t] + problem.discount * later[t]
+    return weight[:-1], later
+
+
+def build_grids(problem: Problem, settings: SolverSettings) -> tuple[LogGrid, LogGrid, LogGrid]:
+    """Account grids: scale = opening balances / 50, the top covering receipts and growth."""
+    essential = problem.utility.essential
+    wealth = max(problem.wealth, essential)
+    receipts = float(np.maximum(problem.income, 0.0).max(axis=1).max(initial=0.0))
+    top = settings.top * (wealth + receipts)
+    sizes = (settings.taxable, settings.tax_deferred, settings.tax_free)
+    exists = problem.has_account
+    grids = [
+        LogGrid.build(n if there else 1, wealth / 50, top) for n, there in zip(sizes, exists, strict=True)
+    ]
+    return grids[0], grids[1], grids[2]
+
+
+def cash_range(problem: Problem, grids: tuple[LogGrid, LogGrid, LogGrid]) -> tuple[float, float]:
+    """Least and largest cash on hand that any node and choice can give."""
+    low, high = 0.0, 0.0
+    for t in range(problem.n_years):
+        for h in range(problem.n_statuses):
+            tax = problem.tax[t][h]
+            # Cash after tax falls below its value at g = 0 only by jumps; the knots show by how much.
+            kept = float(np.min(tax.x - tax.y)) if tax.x.size > 1 else -float(tax.y[0])
+            low = min(low, float(problem.income[t, h]) + min(kept, 0.0))
+            high = max(high, float(problem.income[t, h]))
+    return low - 1.0, high + grids[0].nodes[-1] + grids[1].nodes[-1]
+
+
+def solve(
+    problem: Problem,
+    settings: SolverSettings | None = None,
+    progress: Callable[[float], None] | None = None,
+) -> OptimalPolicy:
+    """Solve the household's problem by backward induction.
+
+    Parameters
+    ----------
+    progress
+        Called after each year with the share of years done.
+
+    Returns
+    -------
+    OptimalPolicy
+        Values and choices on the nodes, for every year and status.
+    """
+    settings = settings or SolverSettings()
+    grids = build_grids(problem, settings)
+    shape = (grids[0].size, grids[1].size, grids[2].size)
+    n_years, n_statuses = problem.need.shape
+    smooth = replace(problem.utility, shortfall_weight=1.0)
+    weights, later_weights = value_weights(problem)
+    low, high = cash_range(problem, grids)
+    slopes = [derivative_matrix(grid.nodes) for grid in grids]
+    level = np.zeros((n_years, n_statuses, *shape))
+    gross = np.zeros_like(level)
+    spending = np.zeros_like(level)
+    cash_price = np.zeros_like(level)
+    portfolio = np.zeros(level.shape, dtype=np.int16)
+    maps: dict[tuple[float, ...], GrowthMaps] = {}
+
+    for t in range(n_years - 1, -1, -1):
+        expected: dict[tuple[int, tuple[float, ...]], FloatArray] = {}
+        for h in range(n_statuses):
+            paid = tuple(problem.contribution[t, h].tolist())
+            if paid not in maps:
+                maps[paid] = growth_maps(problem, grids, problem.contribution[t, h])
+            total = problem.death[t, h] * maps[paid].estate
+            for following in np.flatnonzero(problem.transition[t, h] > 0) if t + 1 < n_years else ():
+                key = (int(following), paid)
+                if key not in expected:
+                    expected[key] = weights[t + 1, following] * expected_value(
+                        problem, maps[paid], level[t + 1, following], smooth
+                    )
+                total = total + problem.transition[t, h, following] * expected[key]
+            portfolio[t, h] = total.argmax(axis=0)
+            later = total.max(axis=0)
+
+            felicity = Felicity(problem.utility, smooth, float(problem.need[t, h]), problem.ceiling)
+            following_level = _continuation(
+                later, float(later_weights[t, h]), problem.discount, smooth, slopes
+            )
+            grid = CashGrid.build(
+                settings.cash, grids[0].scale, low, high, felicity.need * problem.utility.essential
+            )
+            table = cash_table(
+                following_level, felicity, grid, grids[0].nodes, grids[2].nodes, float(weights[t, h])
+            )
+            surface = Surface(table, grids[1], grids[2], slopes[1], slopes[2])
+            situation = Situation(
+                float(problem.income[t, h]),
+                problem.tax[t][h],
+                float(problem.minimum_share[t, h]),
+                float(problem.accessible_share[t, h]),
+                problem.conversions,
+            )
+            choice = Outer(surface, grids[0], situation).solve()
+            level[t, h] = choice.level
+            gross[t, h] = choice.gross
+            price = weights[t, h] * smooth.marginal(choice.level) * choice.cash_slope
+            cash_price[t, h] = price
+            spending[t, h] = felicity.spend(price)
+        if progress is not None:
+            progress((n_years - t) / n_years)
+    return OptimalPolicy(
+        grids=grids,
+        level=level,
+        gross=gross,
+        spending=spending,
+        cash_price=cash_price,
+        portfolio=portfolio,
+        weights=weights,
+        smooth=smooth,
+        utility=problem.utility,
+    )
+
+
+def _continuation(
+    later: FloatArray, weight: float, discount: float, smooth: object, slopes: list[FloatArray]
+) -> Continuation:
+    """Level and slopes of J, in the inner choice's axis order (tax-deferred, taxable, tax-free)."""
+    if weight == 0.0:
+        level = np.zeros(later.shape)
+    else:
+        level = smooth.inverse(later / weight)
+    level = np.ascontiguousarray(level.transpose(1, 0, 2))
+    slope1 = slopes[0] @ level
+    slope3 = level[:, 0, :] @ slopes[2].T
+    return Continuation(level, slope1, slope3, discount * weight)
