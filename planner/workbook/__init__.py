@@ -1,1 +1,1 @@
-"""The client workbook: its declaration, reader and writer."""
+"""The client workbook: its layout, declared once, and what reads and writes it."""
