@@ -38,7 +38,7 @@ def code_of(raised):
 
 
 def makeham(ages, a=0.00022, b=2.7e-6, c=1.124):
-    """Death probabilities of the Standard Ultimate Life Table: mu = A + B c^x (Dickson, Hardy & Waters, ch. 3)."""
+    """Death probabilities where mu = A + B c^x (Dickson, Hardy & Waters, ch. 3)."""
     return -np.expm1(-(a + b * c**ages * (c - 1.0) / np.log(c)))
 
 
