@@ -8,14 +8,19 @@ and adds up to the cent.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from planner.household import Account, AccountType, Household
+from planner.household import Account, AccountType, Household, IncomeKind
+from planner.markets import nominal_moments
 from planner.piecewise import FloatArray, rate_and_room
 from planner.plan_record import AccountInstruction, ThisYear
 from planner.problem import Problem
+from planner.problem_building import Builder
+
+LIFELONG_KINDS = frozenset({IncomeKind.STATE_PENSION, IncomeKind.PENSION, IncomeKind.ANNUITY})
+"""Kinds of income that are paid for life where no last age is given."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -43,6 +48,74 @@ class FirstYear:
     accessible: tuple[bool, ...]
     tax: Callable[[float, float, float], float]
     yields: tuple[float, ...]
+
+
+def first_year(household: Household) -> FirstYear:
+    """Look up the facts of the first year from the household, its tables and its tax rules."""
+    builder = Builder.of(household)
+    rules, status = builder.rules, builder.statuses[0]
+    names = [person.name for person in household.people]
+    year = household.plan_date.year
+    people = builder.taxed_people(0, status)
+
+    incomes = [
+        (income.name, amount) for paid in builder.incomes(0, status).values() for income, amount in paid
+    ]
+    for item in household.one_offs:
+        if item.in_the_plan and item.year <= year <= (item.last_year or item.year):
+            incomes.append((item.item, item.amount))
+    divisors: list[float | None] = []
+    accessible = []
+    for account in household.accounts:
+        if account.type is AccountType.TAXABLE:
+            divisors.append(None)
+            accessible.append(True)
+            continue
+        owner = names.index(account.owner)
+        deferred = account.type is AccountType.TAX_DEFERRED
+        law_age = rules.access_age(year) if deferred else None
+        limit = law_age if account.not_before_age is None else account.not_before_age
+        accessible.append(not deferred or limit is None or bool(builder.ages[owner, 0] >= limit))
+        born = household.people[owner].date_of_birth.year
+        due = rules.minimum_distribution_divisor(builder.tax_age(owner, 0), born) if deferred else None
+        divisors.append(None if due is None else max(due, 1.0))
+        until = account.paid_in_until_age
+        if account.paid_in > 0 and (until is None or builder.ages[owner, 0] < until):
+            incomes.append((f"Paid into {account.name}", -account.paid_in))
+
+    def tax(withdrawal: float, realised_gains: float, yields: float) -> float:
+        return rules.first_year_tax(
+            people,
+            withdrawal=withdrawal,
+            realised_gains=realised_gains,
+            yields=yields,
+            law_year=year,
+            together=builder.together,
+            extra_rate=household.extra_income_tax_rate or 0.0,
+            extra_on_state_pensions=household.extra_rate_on_state_pensions,
+        )
+
+    income_yield = nominal_moments(household.markets, builder.portfolios(), household.adviser_fee)[2]
+    return FirstYear(
+        tuple(incomes), tuple(divisors), tuple(accessible), tax, tuple(float(y) for y in income_yield)
+    )
+
+
+def lifelong_income(household: Household, t: int, status: str) -> float:
+    """Income for life (pensions and annuities without a last age) in year t, after the tax on it.
+
+    Real money; what continues to a survivor is included.
+    """
+    builder = Builder.of(household)
+    lifelong = replace(
+        household,
+        incomes=tuple(i for i in household.incomes if i.kind in LIFELONG_KINDS and i.to_age is None),
+        one_offs=(),
+        accounts=tuple(replace(account, paid_in=0.0) for account in household.accounts),
+    )
+    reduced = replace(builder, household=lifelong)
+    amounts = [a for paid in reduced.incomes(t, status).values() for _, a in paid]
+    return float(sum(amounts) - reduced.tax(t, status)(0.0))
 
 
 @dataclass(frozen=True, slots=True)

@@ -28,8 +28,9 @@ class AccountInstruction:
     """What to do with one account this year.
 
     `minimum_distribution` is the least to take this year by the account's own year-end balance;
-    `still_due` what is left of it after `taken`; `withdraw` is gross and for the whole year;
-    `sell` is what must be sold of a taxable account to raise `withdraw` net of tax on the gain.
+    `still_due` what is left of it after `taken`; `withdraw` is gross, for the year from the plan
+    date on; `sell` is the cash to raise in the account for it, so the tax on a taxable account's
+    gain is part of the year's tax.
     """
 
     account: str
@@ -50,7 +51,8 @@ class ThisYear:
     """The instructions that are acted on now. Withdrawals are gross, by account type.
 
     spending = income + withdraw.taxable + withdraw.tax_deferred + withdraw.tax_free - tax - kept,
-    where `kept` is cash that stays in or is added to the taxable account.
+    where `kept` is cash that is added to the taxable account. `tax` is by the actual bands of the
+    year, gains realised and income paid out in taxable accounts included.
     """
 
     spending: float

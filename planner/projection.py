@@ -11,9 +11,10 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from planner import outcomes
+from planner.cashflow import advance
 from planner.piecewise import FloatArray
 from planner.plan_record import ExampleFuture, LookupRow, NoChangeBand, Range, ScheduleRow, StrategyResult
-from planner.problem import IntArray, Policy, Problem, State
+from planner.problem import TAX_DEFERRED, IntArray, Policy, Problem, State
 from planner.simulation import Paths, Scenarios, draw_scenarios, simulate
 
 ENOUGH_PATHS = 200
@@ -156,7 +157,7 @@ def decide_at(
 ) -> tuple[FloatArray, IntArray, FloatArray]:
     """Spending, portfolio and gross withdrawal with conversion, at balances (n, 3) in one status.
 
-    Spending is held within what is available, as `cashflow.advance` does.
+    `cashflow.advance` holds it within what is possible.
     """
     n = balances.shape[0]
     zeros = np.zeros(n)
@@ -169,7 +170,8 @@ def decide_at(
         memory=np.zeros((n, policy.n_memory)),
     )
     decision = policy.decide(problem, t, state)
-    return np.asarray(decision.spending), decision.portfolio, decision.withdraw + decision.convert
+    year = advance(problem, t, state, decision, np.ones(n))
+    return year.spending, year.portfolio, year.withdrawal[:, TAX_DEFERRED] + year.conversion
 
 
 def lookup(problem: Problem, policy: Policy, middle: FloatArray) -> tuple[LookupRow, ...]:

@@ -28,7 +28,7 @@ LAYERS = (
     ("planner.cashflow",),
     ("planner.problem_building",),
     ("planner.problem",),
-    ("planner.scenarios",),
+    ("planner.scenarios", "planner.stresses"),
     ("planner.workbook",),
     ("planner.mortality", "planner.markets", "planner.taxes", "planner.preferences"),
     ("planner.household",),

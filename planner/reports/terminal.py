@@ -15,6 +15,7 @@ from rich.markup import escape
 from rich.table import Table
 from rich.text import Text
 
+from planner.banded import KeepWithinBand
 from planner.mortality import TableDescription
 from planner.plan_record import Plan, StrategyResult
 from planner.reports.figures import Money, percent
@@ -51,10 +52,10 @@ def _chance(_: Money, value: float) -> str:
 _COLUMNS = (
     _Column("this\nyear", lambda s: s.spending_this_year, _about, None),
     _Column("worth a\nsteady", lambda s: s.level_spending, _about, max),
-    _Column("what it\ncosts you", lambda s: s.wealth_cost, _about, min),
+    _Column("what it\ncosts you", lambda s: s.wealth_cost, lambda m, v: "0" if v == 0 else _about(m, v), min),
     _Column("bills\ncut", lambda s: s.chance_below_essential, _chance, min),
-    _Column("years\ncut", lambda s: s.years_below_essential, lambda _, v: f"{v:.1f}", min, True),
-    _Column("short by\na year", lambda s: s.shortfall, _about, min, True),
+    _Column("years\ncut", lambda s: s.years_below_essential, lambda _, v: f"{v:.1f}", None, True),
+    _Column("short by\na year", lambda s: s.shortfall, _about, None, True),
     _Column("largest\ncut", lambda s: s.largest_yearly_cut, lambda _, v: percent(v, 0), min, True),
     _Column("left\nlow", lambda s: s.estate.p10, _about, None, True),
     _Column("left\nmiddle", lambda s: s.estate.p50, _about, None),
@@ -103,9 +104,9 @@ def comparison(strategies: Sequence[StrategyResult], currency: str, wealth: floa
             cells.append(Text(f"{shown}{BEST if is_best else ' '}", style="bold green" if is_best else ""))
         table.add_row(*cells)
     notes = (
-        f"In today's {currency}; spending is after tax. {BEST} best in its column. 'bills cut': in how many "
-        "futures spending falls below your bills (essential spending) in some year. 'left': at the last "
-        "death, in the middle future."
+        f"In today's {currency}; spending is after tax. {BEST} best in its column, where more or less is "
+        "plainly better. 'bills cut': in how many futures spending falls below your bills (essential "
+        "spending) in some year. 'left': at the last death, in the middle future."
     )
     return Group(
         table,
@@ -122,7 +123,8 @@ def _best_text(column: _Column, strategies: Sequence[StrategyResult], money: Mon
 
 def reading(strategies: Sequence[StrategyResult], money: Money, wealth: float) -> str:
     """One sentence on the table: what the plan spends, what the cheapest and dearest rules cost."""
-    plan, *rules = strategies
+    plan = strategies[0]
+    rules = [result for result in strategies[1:] if result.key != KeepWithinBand.key]
     start = f"The plan spends {money.about(plan.spending_this_year)} this year"
     if not rules:
         return f"{start}."

@@ -1,0 +1,408 @@
+"""From a client workbook to a Plan: the only place where solver, rules and simulator meet.
+
+Every strategy meets the same drawn futures. A fixed seed gives the same plan every time; nothing
+depends on the clock.
+"""
+
+from __future__ import annotations
+
+import difflib
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from planner import __version__, outcomes
+from planner.banded import KeepWithinBand
+from planner.diagnostics import Diagnostic, InputError
+from planner.household import Household
+from planner.instructions import Choice, FirstYear, first_year, lifelong_income, this_year
+from planner.mortality import life_expectancy
+from planner.optimum.policy import OptimalPolicy
+from planner.optimum.recursion import SolverSettings, solve
+from planner.plan_record import Plan, Proof, Sources, StrategyResult, SurvivorView, WhatIfResult
+from planner.problem import Policy, Problem
+from planner.problem_building import Builder, build_problem, life_table_of, tax_rules_of
+from planner.projection import (
+    NO_CHANGE_TOLERANCE,
+    Yardstick,
+    chances_alive,
+    decide_at,
+    example_futures,
+    late_years,
+    lookup,
+    next_opening,
+    no_change_band,
+    schedule,
+    strategy_result,
+)
+from planner.rules import RULES, Rule, rules_for
+from planner.scenarios import plan_what_ifs
+from planner.simulation import Paths, Scenarios, draw_scenarios, simulate
+from planner.stresses import stresses
+from planner.taxes import TaxRules
+from planner.workbook.reading import ReadWorkbook
+
+Progress = Callable[[float, str], None]
+"""Called with the share of the work done, between 0 and 1, and what is being done."""
+
+PLAN_KEY = "plan"
+"""Key of the optimum among strategies."""
+
+
+@dataclass(frozen=True, slots=True)
+class PlanSettings:
+    """How a plan is computed.
+
+    Attributes
+    ----------
+    n_paths : int
+        Drawn futures that every strategy meets.
+    n_what_if_paths : int
+        Drawn futures for each what-if.
+    seed : int
+    solver : SolverSettings
+    rules : tuple of str or None
+        Keys of the rules to compare with; None = all.
+    what_ifs : bool
+        Also solve the what-ifs, each a changed household.
+    """
+
+    n_paths: int = 20_000
+    n_what_if_paths: int = 5_000
+    seed: int = 20260101
+    solver: SolverSettings = field(default_factory=SolverSettings)
+    rules: tuple[str, ...] | None = None
+    what_ifs: bool = True
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Solved:
+    """A household's problem, its optimum, the drawn futures and what the optimum did in them."""
+
+    household: Household
+    problem: Problem
+    policy: OptimalPolicy
+    scenarios: Scenarios
+    paths: Paths
+    late: Paths | None
+    yardstick: Yardstick
+
+
+def solve_household(
+    household: Household,
+    settings: PlanSettings,
+    n_paths: int | None = None,
+    progress: Callable[[float], None] | None = None,
+) -> Solved:
+    """Solve a household's problem and simulate the optimum."""
+    problem = build_problem(household)
+    policy = solve(problem, settings.solver, progress)
+    n = settings.n_paths if n_paths is None else n_paths
+    scenarios = draw_scenarios(problem, n, np.random.default_rng(settings.seed))
+    paths = simulate(problem, policy, scenarios)
+
+    def value_at_scale(scale: float) -> float:
+        return float(policy.value(scale * problem.opening[None, :], 0, 0)[0])
+
+    yardstick = Yardstick(outcomes.path_utilities(problem, paths), value_at_scale)
+    late = late_years(problem, policy, paths, settings.seed)
+    return Solved(household, problem, policy, scenarios, paths, late, yardstick)
+
+
+def compare_strategies(
+    solved: Solved, settings: PlanSettings, progress: Callable[[float], None] | None = None
+) -> tuple[StrategyResult, ...]:
+    """Results of the optimum, first, and of the rules asked for, on the same drawn futures.
+
+    Raises
+    ------
+    InputError
+        Code ``rule-unknown``: a key in the settings names no rule.
+    """
+    problem, policy = solved.problem, solved.policy
+    optimum = strategy_result(problem, policy, PLAN_KEY, solved.paths, solved.late, solved.yardstick)
+    results = [optimum]
+    rules = chosen_rules(solved, settings)
+    for number, rule in enumerate(rules):
+        results.append(_simulated(solved, rule, rule.key, settings))
+        if progress is not None:
+            progress((number + 1) / len(rules))
+    return tuple(results)
+
+
+def _simulated(solved: Solved, policy: Policy, key: str, settings: PlanSettings) -> StrategyResult:
+    paths = simulate(solved.problem, policy, solved.scenarios)
+    late = late_years(solved.problem, policy, paths, settings.seed)
+    return strategy_result(solved.problem, policy, key, paths, late, solved.yardstick)
+
+
+def chosen_rules(solved: Solved, settings: PlanSettings) -> tuple[Rule, ...]:
+    """Rules that the settings ask for; they hold the portfolio the optimum holds in the first year."""
+    portfolio = int(solved.paths.portfolio[0, 0])
+    rules = rules_for(solved.problem, portfolio, solved.household.spending.wanted)
+    if settings.rules is None:
+        return rules
+    wanted = [rule_key(name) for name in settings.rules]
+    missing = set(wanted) - {rule.key for rule in rules}
+    if missing:
+        message = f"the rule {sorted(missing)[0]!r} needs 'Wanted spending a year', which is blank"
+        raise InputError([Diagnostic("rule-needs-wanted", "--rule", message)])
+    return tuple(rule for rule in rules if rule.key in wanted)
+
+
+def rule_key(name: str) -> str:
+    """Key of a rule given by its key or by its name to people.
+
+    Raises
+    ------
+    InputError
+        Code ``rule-unknown``.
+    """
+    plain = name.strip().casefold()
+    for rule in RULES:
+        if plain in (rule.key, rule.name.casefold()):
+            return rule.key
+    keys = [rule.key for rule in RULES]
+    near = difflib.get_close_matches(plain, keys, n=1)
+    hint = f"did you mean {near[0]!r}?" if near else f"rules are {', '.join(keys)}"
+    raise InputError([Diagnostic("rule-unknown", "--rule", f"no rule is called {name!r}; {hint}")])
+
+
+def make_plan(
+    read: ReadWorkbook,
+    settings: PlanSettings | None = None,
+    progress: Progress | None = None,
+    workbook_name: str = "",
+) -> Plan:
+    """Make the whole plan for a client.
+
+    Parameters
+    ----------
+    read
+        The client workbook as read.
+    settings
+        See `PlanSettings`.
+    progress
+        See `Progress`.
+    workbook_name
+        File name, for the record.
+
+    Returns
+    -------
+    Plan
+        Every figure that a report prints.
+
+    Raises
+    ------
+    InputError
+        The household cannot be planned for, or the settings name an unknown rule.
+    """
+    settings = settings or PlanSettings()
+    report = progress or (lambda share, what: None)
+    household = read.household
+    what_ifs = _what_if_households(read) if settings.what_ifs else ()
+    # Measured shares of the work: solving is about as long as simulating all strategies.
+    end_base = 1.0 if not what_ifs else 1.0 / (1.0 + 0.45 * len(what_ifs))
+
+    report(0.0, "finding the best plan")
+    solved = solve_household(
+        household, settings, progress=lambda s: report(0.6 * end_base * s, "finding the best plan")
+    )
+    problem, policy, paths = solved.problem, solved.policy, solved.paths
+    strategies = compare_strategies(
+        solved, settings, lambda s: report(end_base * (0.6 + 0.35 * s), "testing rules of thumb")
+    )
+    banded = KeepWithinBand(policy, NO_CHANGE_TOLERANCE)
+    strategies += (_simulated(solved, banded, banded.key, settings),)
+
+    facts = first_year(household)
+    now = paths_first_choice(solved)
+    instructions = this_year(household, problem, facts, now)
+    middle = next_opening(problem, paths)
+    plan_year = household.plan_date.year
+    rules = tax_rules_of(household)
+    late_year = _late_year(problem)
+
+    results = []
+    for number, (name, changed) in enumerate(what_ifs):
+        share = end_base + (1 - end_base) * number / len(what_ifs)
+        report(share, f"what if: {name}")
+        results.append(_what_if_result(name, changed, late_year, settings))
+
+    fees = _fees(household)
+    report(1.0, "done")
+    return Plan(
+        household=household,
+        problem=problem,
+        life_expectancy=_life_expectancies(household),
+        bills_covered_now=_bills_covered(household, problem, 0, 0),
+        this_year=instructions,
+        level_spending=strategies[0].level_spending,
+        value_share_simulated=_simulated_share(solved),
+        proof=_proof(solved),
+        schedule=schedule(problem, paths, solved.late, plan_year),
+        lookup=lookup(problem, policy, middle),
+        band=no_change_band(problem, policy, middle),
+        strategies=strategies,
+        futures=example_futures(problem, paths, solved.scenarios, plan_year),
+        survivors=_survivors(household, problem, policy, middle),
+        what_ifs=tuple(results),
+        yearly_costs=_yearly_costs(household, now.portfolio),
+        plan_costs=_plan_costs(problem, paths, fees),
+        warnings=read.warnings,
+        sources=Sources(
+            version=__version__,
+            workbook_name=workbook_name,
+            workbook_sha256=read.sha256,
+            seed=settings.seed,
+            n_paths=settings.n_paths,
+            life_tables=tuple(dict.fromkeys(person.life_table for person in household.people)),
+            tax_rules=rules.name,
+            notes=_notes(household, problem, rules, facts, now, instructions.tax),
+        ),
+    )
+
+
+def paths_first_choice(solved: Solved) -> Choice:
+    """What the optimum does in year 0, the same on every path."""
+    paths = solved.paths
+    return Choice(
+        withdraw=float(paths.withdrawal[0, 0, 1]),
+        convert=float(paths.conversion[0, 0]),
+        spending=float(paths.spending[0, 0]),
+        portfolio=int(paths.portfolio[0, 0]),
+    )
+
+
+def _proof(solved: Solved) -> Proof | None:
+    """How near the best possible; None until the upper bound is computed."""
+    return None
+
+
+def _simulated_share(solved: Solved) -> float:
+    """Simulated over solved certainty equivalent: a check on the recursion, about 1."""
+    problem, policy = solved.problem, solved.policy
+    weight = float(policy.weights[0, 0])
+    simulated = float(problem.utility.inverse(solved.yardstick.utilities.mean() / weight))
+    recursion = float(problem.utility.inverse(solved.yardstick.value_at_scale(1.0) / weight))
+    return simulated / recursion
+
+
+def _life_expectancies(household: Household) -> tuple[float, ...]:
+    """Expected remaining years of each person, from the table with its multiplier."""
+    day = household.plan_date
+    return tuple(
+        life_expectancy(
+            life_table_of(household, person),
+            person.sex,
+            person.age_on(day),
+            person.mortality_multiplier,
+            day.year,
+        )
+        for person in household.people
+    )
+
+
+def _bills_covered(household: Household, problem: Problem, t: int, status: int) -> float:
+    """Lifelong income after the tax on it, over essential spending, in year t."""
+    essential = problem.utility.essential * float(problem.need[t, status])
+    return lifelong_income(household, t, problem.statuses[status]) / essential
+
+
+def _survivors(
+    household: Household, problem: Problem, policy: OptimalPolicy, middle: np.ndarray
+) -> tuple[SurvivorView, ...]:
+    """For a couple: next year at the middle savings, had one of the two died in between."""
+    if problem.n_statuses == 1 or problem.n_years < 2:
+        return ()
+    views = []
+    for h, person in zip((1, 2), household.people, strict=True):
+        spending, _, gross = decide_at(problem, policy, 1, middle[None, :], h)
+        views.append(
+            SurvivorView(
+                survivor=person.name,
+                income=float(problem.income[1, h]),
+                income_before=float(problem.income[1, 0]),
+                spending=float(spending[0]),
+                tax=float(problem.tax[1][h](gross)[0]),
+                essential=problem.utility.essential * float(problem.need[1, h]),
+                bills_covered=_bills_covered(household, problem, 1, h),
+            )
+        )
+    return tuple(views)
+
+
+def _late_year(problem: Problem) -> int:
+    """Last year that someone opens alive with a chance of at least one in four."""
+    return int(np.flatnonzero(chances_alive(problem).sum(axis=1) >= 0.25)[-1])
+
+
+def _what_if_households(read: ReadWorkbook) -> Sequence[tuple[str, Household]]:
+    own = [(name, changed.household) for name, changed in plan_what_ifs(read)]
+    return (*stresses(read.household), *own)
+
+
+def _what_if_result(name: str, household: Household, late_year: int, settings: PlanSettings) -> WhatIfResult:
+    solved = solve_household(household, settings, settings.n_what_if_paths)
+    optimum = strategy_result(
+        solved.problem, solved.policy, PLAN_KEY, solved.paths, solved.late, solved.yardstick
+    )
+    return WhatIfResult(
+        name=name,
+        spending_this_year=optimum.spending_this_year,
+        spending_p10_late=float(optimum.spending[0, min(late_year, solved.problem.n_years - 1)]),
+        chance_below_essential=optimum.chance_below_essential,
+        level_spending=optimum.level_spending,
+        estate_p50=optimum.estate.p50,
+    )
+
+
+def _fees(household: Household) -> np.ndarray:
+    """Yearly cost of each portfolio of the problem with the adviser's fee, a share, (n_portfolios,)."""
+    portfolios = Builder.of(household).portfolios()
+    return np.array([portfolio.yearly_cost for portfolio in portfolios]) + household.adviser_fee
+
+
+def _yearly_costs(household: Household, portfolio: int) -> tuple[tuple[str, float], ...]:
+    """Fees this year on today's savings, in money."""
+    total = sum(account.balance for account in household.accounts)
+    own = float(_fees(household)[portfolio]) - household.adviser_fee
+    costs = (("Adviser fee", household.adviser_fee * total), ("Cost of the portfolio", own * total))
+    return tuple((name, round(cost, 2)) for name, cost in costs if cost > 0)
+
+
+def _plan_costs(problem: Problem, paths: Paths, fees: np.ndarray) -> float:
+    """Mean over futures of all fees: on what stays invested after each year's withdrawals."""
+    invested = np.maximum(paths.balances[:, :-1].sum(axis=2) - paths.withdrawal.sum(axis=2), 0.0)
+    return float((fees[paths.portfolio] * invested * paths.alive).sum(axis=1).mean())
+
+
+def _notes(
+    household: Household, problem: Problem, rules: TaxRules, facts: FirstYear, choice: Choice, tax: float
+) -> tuple[str, ...]:
+    """Return notes on sources and conventions that a reader of the figures needs."""
+    planning = float(problem.tax[0][0](choice.withdraw + choice.convert))
+    notes = [
+        f"Tax rules {rules.name}: {rules.title}; {rules.publisher}; {rules.source}; law year {rules.year}.",
+        *(f"Tax rules {rules.name}: {note}" for note in rules.notes),
+    ]
+    for table in {
+        person.life_table: life_table_of(household, person) for person in household.people
+    }.values():
+        notes.append(f"Life table {table.name}: {table.title}; {table.publisher}; {table.source}.")
+    notes += [
+        f"Tax this year ({tax:,.2f}) is by the actual bands, with the gains realised by what is sold and the "
+        f"income paid out in taxable accounts. Later years use a planning tax ({planning:,.2f} for this "
+        "year): there tax on yields and gains is spread over the years as a lower return.",
+        "Savings in projections: taxable money after tax on its gain so far, without cash kept aside.",
+        "Rules of thumb hold the portfolio that the plan holds this year, throughout.",
+        f"'Late' in the what-ifs is {household.plan_date.year + _late_year(problem)}, the last year in which "
+        "someone is alive with a chance of at least one in four.",
+    ]
+    return tuple(notes)
+
+
+def original_and_changed(settings: PlanSettings) -> PlanSettings:
+    """Return settings for a comparison in the terminal: no what-ifs of their own."""
+    return replace(settings, what_ifs=False)
