@@ -203,7 +203,6 @@ def least_withdrawal(tax: PiecewiseLinear, net: ArrayLike, at_least: ArrayLike =
             continue
         crossing = left + (net - (left - paid)) / (1 - slope)
         found = short & (crossing <= right) & (start < right)
-        # Never past the right end, where a jump may wait.
-        w = np.where(found, np.clip(crossing, np.maximum(left, start), right), w)
+        w = np.where(found, np.maximum(crossing, np.maximum(left, start)), w)
         short &= ~found
     return w
