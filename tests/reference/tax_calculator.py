@@ -1,4 +1,4 @@
-"""Run the open model Tax-Calculator (`taxcalc`) on households from stdin; a script, so that numba may stay off.
+"""Run the open model Tax-Calculator (`taxcalc`) on households from stdin, with numba off.
 
 Without its compiler a thousand households take two seconds; compiling takes twenty.
 Usage: NUMBA_DISABLE_JIT=1 python tax_calculator.py YEAR < households.csv > taxes.csv
