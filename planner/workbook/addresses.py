@@ -46,6 +46,7 @@ def _refuse(code: str, address: str, message: str) -> NoReturn:
 def _hint(found: str, known: Iterable[str]) -> str:
     by_key = {normalised(name): name for name in known}
     near = difflib.get_close_matches(normalised(found), list(by_key), n=1)
+    near = near or [key for key in by_key if key.startswith(normalised(found))][:1]
     if near:
         return f"did you mean {by_key[near[0]]!r}?"
     return f"expected one of {', '.join(by_key.values())}" if by_key else "there is none"
