@@ -7,16 +7,20 @@ imports are local to commands, so that help appears at once.
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator
+import sys
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated, TypeVar
 
 import typer
 from rich.console import Console
 from rich.markup import escape
 
 from planner.diagnostics import Diagnostic, InputError, PlannerError
+
+if TYPE_CHECKING:
+    from planner.plan import PlanSettings
 
 app = typer.Typer(
     name="planner",
@@ -28,6 +32,11 @@ app = typer.Typer(
 )
 
 ClientWorkbook = Annotated[Path, typer.Argument(metavar="CLIENT.xlsx", help="The client workbook.")]
+Futures = Annotated[int | None, typer.Option(min=100, help="Futures to test (default 20,000).")]
+Seed = Annotated[int | None, typer.Option(min=0, help="Seed of the drawn futures; same seed, same plan.")]
+
+PASSWORD_VARIABLE = "PLANNER_PDF_PASSWORD"
+Result = TypeVar("Result")
 
 
 def print_problem(problem: Diagnostic, console: Console) -> None:
@@ -59,6 +68,9 @@ def reporting_errors() -> Iterator[None]:
         raise typer.Exit(1) from None
     except BrokenPipeError:
         raise
+    except KeyboardInterrupt:
+        console.print("interrupted; nothing half-written is left behind")
+        raise typer.Exit(130) from None
     except FileNotFoundError as error:
         console.print(f"[red]error[/] {escape(str(error.filename))}: no such file", soft_wrap=True)
         raise typer.Exit(1) from None
@@ -115,6 +127,238 @@ def check(
         else:
             console = Console(highlight=False)
             show(read, Console(highlight=False, width=80) if not console.is_terminal else console)
+
+
+@app.command()
+def plan(
+    client: ClientWorkbook,
+    output: Annotated[
+        Path | None,
+        typer.Option("-o", "--output", metavar="PLAN.pdf", help="Default: CLIENT.pdf in the current folder."),
+    ] = None,
+    workbook: Annotated[
+        Path | None, typer.Option(metavar="RESULTS.xlsx", help="Also write a results workbook.")
+    ] = None,
+    as_json: Annotated[
+        Path | None, typer.Option("--json", metavar="RESULTS.json", help="Also write results for programs.")
+    ] = None,
+    password: Annotated[
+        bool,
+        typer.Option("--password", help=f"Protect the PDF; asked for, or from {PASSWORD_VARIABLE}."),
+    ] = False,
+    futures: Futures = None,
+    seed: Seed = None,
+    verbose: Annotated[bool, typer.Option("--verbose", help="Say on stderr what is done and how.")] = False,
+) -> None:
+    """Make the plan for a client and write it as a PDF."""
+    with reporting_errors():
+        pdf = Path(f"{client.stem}.pdf") if output is None else output
+        files = {"-o": pdf, "--workbook": workbook, "--json": as_json}
+        _refuse_clashes(client, {option: path for option, path in files.items() if path is not None})
+        secret = _password() if password else None
+
+        from planner.files import write_whole
+        from planner.plan import make_plan
+        from planner.reports.terminal import plan_summary
+        from planner.workbook.reading import read_workbook
+
+        read = read_workbook(client)
+        errors = Console(stderr=True, highlight=False)
+        for warning in read.warnings:
+            print_problem(warning, errors)
+        settings = _settings(futures, seed)
+        with _progress(errors, verbose) as progress:
+            made = make_plan(read, settings, progress, client.name)
+        # Everything is made before anything is written.
+        contents: dict[Path, bytes] = {}
+        if workbook is not None:
+            from planner.reports.export import results_workbook
+
+            contents[workbook] = results_workbook(made)
+        if as_json is not None:
+            from planner.reports.export import json_text, results_json
+
+            contents[as_json] = json_text(results_json(made)).encode("utf-8")
+        from planner.reports.pdf import render_pdf
+
+        document = render_pdf(made)
+        if secret is not None:
+            from planner.reports.protection import protected
+
+            document = protected(document, secret)
+        contents = {pdf: document} | contents
+        for path, content in contents.items():
+            write_whole(path, content)
+        if verbose:
+            errors.print(
+                f"{settings.n_paths:,} futures, seed {settings.seed}; simulated over solved value "
+                f"{made.value_share_simulated:.4f} (about 1)"
+            )
+        out = _output()
+        out.print(plan_summary(made))
+        for path in contents:
+            out.print(f"{escape(str(path))} written", soft_wrap=True)
+
+
+@app.command()
+def compare(
+    client: ClientWorkbook,
+    rule: Annotated[
+        list[str] | None, typer.Option(metavar="KEY", help="Only this rule of thumb; repeatable.")
+    ] = None,
+    what_if: Annotated[
+        list[str] | None,
+        typer.Option(
+            metavar="ADDRESS=VALUE",
+            help="Change a cell, such as 'Income/State pension/From age=70'; repeatable.",
+        ),
+    ] = None,
+    as_json: Annotated[bool, typer.Option("--json", help="Print for other programs.")] = False,
+    futures: Futures = None,
+    seed: Seed = None,
+) -> None:
+    """Compare the plan with rules of thumb, or with the plan for a changed client."""
+    with reporting_errors():
+        from dataclasses import replace
+
+        from planner.plan import compare as compare_household
+        from planner.plan import rule_key
+        from planner.reports.terminal import comparison, side_by_side
+        from planner.scenarios import changed, parse_change
+        from planner.workbook.reading import read_workbook
+
+        keys = _every(rule_key, rule or [])
+        changes = _every(parse_change, what_if or [])
+        read = read_workbook(client)
+        other = changed(read, changes) if changes else None
+        errors = Console(stderr=True, highlight=False)
+        for warning in (read if other is None else other).warnings:
+            print_problem(warning, errors)
+        settings = replace(_settings(futures, seed), rules=tuple(keys) or None)
+        with _progress(errors, False) as progress:
+            part = 1.0 if other is None else 0.5
+            before = compare_household(read.household, settings, lambda s, what: progress(part * s, what))
+            after = None
+            if other is not None:
+                after = compare_household(
+                    other.household, settings, lambda s, what: progress(0.5 + 0.5 * s, what)
+                )
+        if as_json:
+            from planner.reports.export import comparison_json, json_text
+
+            typer.echo(json_text(comparison_json(before, after, changes)), nl=False)
+            return
+        out = _output()
+        currency = read.household.currency
+        if after is None:
+            out.print(comparison(before.strategies, currency, before.solved.problem.wealth, out.width))
+            return
+        out.print(side_by_side(before.strategies, after.strategies, currency, what_if or []))
+        out.print("\nThe changed client:", style="bold")
+        out.print(
+            comparison(
+                after.strategies,
+                after.solved.household.currency,
+                after.solved.problem.wealth,
+                out.width,
+            )
+        )
+
+
+@app.command()
+def tables() -> None:
+    """List the life tables and tax rules that come with the program, each with source and year."""
+    with reporting_errors():
+        from planner import mortality, taxes
+        from planner.reports.terminal import shipped_tables
+
+        out = _output()
+        out.print(shipped_tables(mortality.describe(), taxes.describe(), out.width))
+
+
+def _output() -> Console:
+    """Standard output: as wide as the terminal, else 80 columns (or the variable COLUMNS)."""
+    return Console(highlight=False, soft_wrap=False)
+
+
+def _every(convert: Callable[[str], Result], items: list[str]) -> list[Result]:
+    """Convert every text; the problems of all of them in one `InputError`."""
+    results: list[Result] = []
+    found: list[Diagnostic] = []
+    for item in items:
+        try:
+            results.append(convert(item))
+        except InputError as error:
+            found.extend(error.diagnostics)
+    if found:
+        raise InputError(found)
+    return results
+
+
+def _settings(futures: int | None, seed: int | None) -> PlanSettings:
+    from planner.plan import PlanSettings
+
+    standard = PlanSettings()
+    n_paths = standard.n_paths if futures is None else futures
+    return PlanSettings(
+        n_paths=n_paths,
+        n_what_if_paths=min(n_paths, standard.n_what_if_paths),
+        seed=standard.seed if seed is None else seed,
+    )
+
+
+def _refuse_clashes(client: Path, files: dict[str, Path]) -> None:
+    """Refuse to write over the client workbook, twice to one file, or into a folder's place."""
+    found: list[Diagnostic] = []
+    seen = {client.resolve(): "the client workbook"}
+    for option, path in files.items():
+        place = path.resolve()
+        if place in seen:
+            message = f"{path} is {seen[place]}; expected another name"
+            found.append(Diagnostic("output-clash", option, message))
+        elif path.is_dir():
+            found.append(Diagnostic("output-is-folder", option, f"{path} is a folder; expected a file name"))
+        seen.setdefault(place, f"already written by {option}")
+    if found:
+        raise InputError(found)
+
+
+def _password() -> str:
+    """Return the PDF's password from the environment, else from a prompt; never from the command line."""
+    from planner.reports.protection import check_available
+
+    check_available()
+    secret = os.environ.get(PASSWORD_VARIABLE, "")
+    if not secret and sys.stdin.isatty():
+        secret = typer.prompt("Password for the PDF", hide_input=True, confirmation_prompt=True, err=True)
+    if not secret:
+        message = f"there is no terminal to ask for it, and the variable {PASSWORD_VARIABLE} is empty"
+        raise InputError([Diagnostic("password-missing", "--password", message)])
+    return secret
+
+
+@contextmanager
+def _progress(console: Console, verbose: bool) -> Iterator[Callable[[float, str], None]]:
+    """Draw a bar on stderr where that is a terminal; lines where verbose; else nothing."""
+    if verbose:
+        last = ""
+
+        def say(share: float, what: str) -> None:
+            nonlocal last
+            if what != last:
+                console.print(f"{share:4.0%} {escape(what)}")
+                last = what
+
+        yield say
+    elif console.is_terminal:
+        from rich.progress import BarColumn, Progress, TextColumn
+
+        columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:>3.0f}%"))
+        with Progress(*columns, console=console, transient=True) as bar:
+            task = bar.add_task("reading", total=1.0)
+            yield lambda share, what: bar.update(task, completed=share, description=escape(what))
+    else:
+        yield lambda share, what: None
 
 
 def main() -> None:

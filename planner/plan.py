@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import difflib
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -129,6 +129,24 @@ def compare_strategies(
         if progress is not None:
             progress((number + 1) / len(rules))
     return tuple(results)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Comparison:
+    """A solved household and its strategies, the optimum first."""
+
+    solved: Solved
+    strategies: tuple[StrategyResult, ...]
+
+
+def compare(household: Household, settings: PlanSettings, progress: Progress | None = None) -> Comparison:
+    """Compare the optimum with the rules that the settings ask for; see `compare_strategies`."""
+    report = progress or (lambda share, what: None)
+    solved = solve_household(household, settings, progress=lambda s: report(0.6 * s, "finding the best plan"))
+    strategies = compare_strategies(
+        solved, settings, lambda s: report(0.6 + 0.4 * s, "testing rules of thumb")
+    )
+    return Comparison(solved, strategies)
 
 
 def _simulated(solved: Solved, policy: Policy, key: str, settings: PlanSettings) -> StrategyResult:
@@ -401,8 +419,3 @@ def _notes(
         "someone is alive with a chance of at least one in four.",
     ]
     return tuple(notes)
-
-
-def original_and_changed(settings: PlanSettings) -> PlanSettings:
-    """Return settings for a comparison in the terminal: no what-ifs of their own."""
-    return replace(settings, what_ifs=False)
