@@ -4,12 +4,12 @@ from __future__ import annotations
 
 from typing import Final
 
-from openpyxl.styles import Alignment, Font
+from openpyxl.styles import Alignment
 from openpyxl.worksheet.worksheet import Worksheet
 
 from planner.workbook.fields import Field, Form, Sheet
 from planner.workbook.layout import SHEETS, shown_choices
-from planner.workbook.styles import DARK, GREY, REQUIRED_HEAD, UNDERLINE, WHITE_BOLD, set_up_page
+from planner.workbook.styles import DARK, GREY, REQUIRED_HEAD, UNDERLINE, WHITE_BOLD, font, set_up_page
 
 _STEPS: Final = (
     "Fill in the sheets with a gold tab: Household, People, Accounts, Spending, Markets and Portfolios. "
@@ -30,18 +30,18 @@ def write_guide(worksheet: Worksheet, remark: str) -> None:
     """Write how to fill in the workbook, and every field with its meaning."""
     for letter, width in zip("ABCDE", (30, 40, 12, 70, 44), strict=True):
         worksheet.column_dimensions[letter].width = width
-    worksheet.cell(1, 1, "Client workbook: how to fill it in").font = Font(bold=True, size=16, color=DARK)
+    worksheet.cell(1, 1, "Client workbook: how to fill it in").font = font(bold=True, size=16, color=DARK)
     row = 2
     if remark:
         cell = worksheet.cell(row, 1, remark)
-        cell.font = Font(bold=True, color="8A1C1C")
+        cell.font = font(bold=True, color="8A1C1C")
         row += 1
     row += 1
     for number, step in enumerate(_STEPS, start=1):
         worksheet.merge_cells(start_row=row, start_column=1, end_row=row, end_column=5)
         cell = worksheet.cell(row, 1, f"{number}.  {step}")
         cell.alignment = Alignment(wrap_text=True, vertical="top")
-        worksheet.row_dimensions[row].height = 16 if len(step) < 165 else 31
+        worksheet.row_dimensions[row].height = 16 if len(step) < 150 else 31
         row += 1
     row += 1
     _line(worksheet, row, ("Sheet", "Field or column", "Required", "What it is", "If left blank"), head=True)
@@ -52,8 +52,9 @@ def write_guide(worksheet: Worksheet, remark: str) -> None:
 
 
 def _sheet(worksheet: Worksheet, sheet: Sheet, row: int) -> int:
-    worksheet.cell(row, 1, sheet.name).font = Font(bold=True, size=12, color=DARK)
-    worksheet.cell(row, 2, sheet.purpose).font = Font(italic=True, color=GREY)
+    worksheet.cell(row, 1, sheet.name).font = font(bold=True, size=12, color=DARK)
+    worksheet.row_dimensions[row].height = 20
+    worksheet.cell(row, 2, sheet.purpose).font = font(italic=True, color=GREY)
     for part in sheet.parts:
         for field in part.fields if isinstance(part, Form) else part.columns:
             row += 1
@@ -82,6 +83,6 @@ def _line(worksheet: Worksheet, row: int, words: tuple[str, ...], *, head: bool 
             cell.font = WHITE_BOLD
             cell.fill = REQUIRED_HEAD
         elif column == 2:
-            cell.font = Font(bold=words[2] == "yes")
+            cell.font = font(bold=words[2] == "yes")
     longest = max(len(words[1]) / 40, len(words[3]) / 72, len(words[4]) / 44)
     worksheet.row_dimensions[row].height = 15 * (1 + int(longest))

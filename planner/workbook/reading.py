@@ -5,6 +5,7 @@ from __future__ import annotations
 import difflib
 import hashlib
 import math
+import re
 from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from datetime import date
@@ -46,18 +47,20 @@ from planner.workbook.parsing import CellProblem, parse
 from planner.workbook.scanning import scan
 
 NOT_READ: Final = math.nan  # stands for a number that could not be read; trips no rule but "finite"
+_INDEX: Final = re.compile(r"\[\d+\]")
 _NUMBERS: Final = frozenset(
     (Kind.MONEY, Kind.SHARE, Kind.RATE, Kind.FACTOR, Kind.NUMBER, Kind.AGE, Kind.YEAR, Kind.CORRELATION)
 )
 
-# Rules that compare with something elsewhere: not said while that could not be read itself.
+# Rules that compare with something elsewhere: not said while that could not be read itself. A dot in
+# front: of the same row. ``people.name``: the table, or the name in any of its rows.
 _DEPENDS_ON: Final[dict[str, tuple[str, ...]]] = {
-    "owner-unknown": ("people",),
-    "owner-joint-single": ("people",),
-    "partner-missing": ("people",),
-    "people-count": ("people",),
-    "portfolio-unknown": ("portfolios",),
-    "income-unknown": ("incomes",),
+    "owner-unknown": ("people.name",),
+    "owner-joint-single": ("people.name",),
+    "partner-missing": ("people.name",),
+    "people-count": ("people.name",),
+    "portfolio-unknown": ("portfolios.name",),
+    "income-unknown": ("incomes.name",),
     "year-past": ("plan_date",),
     "birth-date-future": ("plan_date",),
     "age-above-table": ("plan_date",),
@@ -124,8 +127,12 @@ def read_workbook(path: str | Path) -> ReadWorkbook:
     file = Path(path)
     content = file.read_bytes()
     data = scan(content, file.name)
-    household, warnings = build(data)
-    found = _what_if_problems(data, household)
+    lost = _lost_addresses(data)
+    try:
+        household, warnings = build(data)
+    except InputError as error:
+        raise InputError((*error.diagnostics, *lost)) from None
+    found = lost or _what_if_problems(data, household)
     if found:
         raise InputError((*found, *warnings))
     return ReadWorkbook(household, warnings, data, hashlib.sha256(content).hexdigest())
@@ -146,34 +153,41 @@ def build(data: WorkbookData) -> tuple[Household, tuple[Diagnostic, ...]]:
     return _Builder(data).run()
 
 
-def _what_if_problems(data: WorkbookData, household: Household) -> list[Diagnostic]:
-    """Try every what-if of the workbook; report at its cell on the sheet What-ifs."""
+def _change_rows(data: WorkbookData) -> list[tuple[Entry, Entry]]:
+    """Return name and change of every row of the sheet What-ifs that has both."""
     table = data.tables.get(("What-ifs", "what-ifs"))
-    if table is None:
-        return []
+    rows = [(row.entries.get("name"), row.entries.get("change")) for row in table.rows] if table else []
+    return [(name, change) for name, change in rows if name and change and not change.is_blank]
+
+
+def _lost_addresses(data: WorkbookData) -> list[Diagnostic]:
+    """Changes on the sheet What-ifs that name nothing, each at its cell."""
     found: list[Diagnostic] = []
-    cells: dict[tuple[str, str], str] = {}
-    for row in table.rows:
-        entries = (row.entries["name"], row.entries["change"])
-        cells.setdefault((" ".join(entries[0].text.split()), entries[1].text), entries[1].cell)
+    for _, change in _change_rows(data):
+        try:
+            replaced(data, change.text, "")
+        except InputError as error:
+            found.extend(replace(problem, where=change.cell) for problem in error.diagnostics)
+    return found
+
+
+def _what_if_problems(data: WorkbookData, household: Household) -> list[Diagnostic]:
+    """Try every what-if of the workbook; report at its first cell on the sheet What-ifs."""
+    cells: dict[str, str] = {}
+    for name, change in _change_rows(data):
+        cells.setdefault(" ".join(name.text.split()), change.cell)
+    found: list[Diagnostic] = []
     for what_if in household.what_ifs:
-        changed, sound = data, True
+        changed = data
         for address, value in what_if.changes:
-            try:
-                changed = replaced(changed, address, value)
-            except InputError as error:
-                sound = False
-                where = cells.get((what_if.name, address), "What-ifs")
-                found.extend(replace(problem, where=where) for problem in error.diagnostics)
-        if not sound:
-            continue
+            changed = replaced(changed, address, value)
         try:
             build(changed)
         except InputError as error:
-            where = cells.get((what_if.name, what_if.changes[0][0]), "What-ifs")
             for problem in error.diagnostics:
                 if problem.severity == "error":
                     message = f"with {what_if.name!r}, {problem.where}: {problem.message} ({problem.code})"
+                    where = cells.get(what_if.name, "What-ifs")
                     found.append(Diagnostic("what-if-invalid", where, message))
     return found
 
@@ -207,7 +221,7 @@ class _Builder:
                 return None
             where = entry.cell if entry is not None else path
             if entry is not None:  # an absent column or label is said once, where it should stand
-                self.say("value-missing", where, f"{field.label} is blank; {field.note}")
+                self.say("value-missing", where, f"{field.label} is blank but required: {field.note}")
         else:
             try:
                 return parse(field, entry)
@@ -363,8 +377,9 @@ class _Builder:
         parent = complaint.where.rpartition(".")[0]
         for dependency in _DEPENDS_ON.get(complaint.code, ()):
             whole = parent + dependency if dependency.startswith(".") else dependency
-            if any(within(path, whole) for path in self.unread):
-                return True
+            for path in self.unread:
+                if within(path, whole) or _INDEX.sub("", path) == whole or whole == f"{path}.name":
+                    return True
         return False
 
     def _unused(self, parts: dict[str, Any]) -> None:

@@ -11,14 +11,22 @@ from openpyxl.styles import Border, Font, PatternFill, Side
 from openpyxl.worksheet.properties import PageSetupProperties
 from openpyxl.worksheet.worksheet import Worksheet
 
+FONT_NAME: Final = "Calibri"  # also the default of new workbooks, which cells without a font have
+
+
+def font(*, bold: bool = False, italic: bool = False, size: float = 11, color: str | None = None) -> Font:
+    """Return a font of the workbook's one family."""
+    return Font(name=FONT_NAME, bold=bold, italic=italic, size=size, color=color)
+
+
 DARK: Final = "1F3A4D"
 GREY: Final = "5B6770"
 REQUIRED_FILL: Final = PatternFill("solid", fgColor="FFF3C4")
 OPTIONAL_FILL: Final = PatternFill("solid", fgColor="F6F8FA")
 REQUIRED_HEAD: Final = PatternFill("solid", fgColor=DARK)
 OPTIONAL_HEAD: Final = PatternFill("solid", fgColor="DDE5EA")
-NOTE_FONT: Final = Font(italic=True, color=GREY, size=9)
-WHITE_BOLD: Final = Font(bold=True, color="FFFFFF")
+NOTE_FONT: Final = font(italic=True, color=GREY, size=9)
+WHITE_BOLD: Final = font(bold=True, color="FFFFFF")
 
 _STRONG: Final = Side(style="thin", color="7A6A2A")
 _FAINT: Final = Side(style="hair", color="8795A1")

@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Final, TypeAlias
 
 import openpyxl
-from openpyxl.styles import Alignment, Font
+from openpyxl.styles import Alignment
 from openpyxl.utils import get_column_letter, quote_sheetname
 from openpyxl.workbook import Workbook
 from openpyxl.worksheet.datavalidation import DataValidation
@@ -32,6 +32,7 @@ from planner.workbook.styles import (
     REQUIRED_FILL,
     REQUIRED_HEAD,
     WHITE_BOLD,
+    font,
     set_up_page,
 )
 
@@ -206,7 +207,7 @@ class _SheetWriter:
 
     def write(self) -> None:
         title = self.worksheet.cell(1, 1, f"{self.sheet.name}{'' if self.sheet.required else ' (optional)'}")
-        title.font = Font(bold=True, size=15, color=DARK)
+        title.font = font(bold=True, size=15, color=DARK)
         purpose = self.worksheet.cell(2, 1, self.sheet.purpose)
         purpose.font = NOTE_FONT
         row, column, top = 4, 1, 4
@@ -237,7 +238,7 @@ class _SheetWriter:
             sheet.freeze_panes = f"B{row}"
         for field in form.fields:
             label = sheet.cell(row, 1, field.label)
-            label.font = Font(bold=field.required)
+            label.font = font(bold=field.required)
             label.alignment = Alignment(vertical="top", wrap_text=True)
             value = self.values.get(field.label)
             assert not isinstance(value, Sequence) or isinstance(value, str)
@@ -253,7 +254,7 @@ class _SheetWriter:
                     sheet.row_dimensions[row].height = 15 * (1 + len(str(value)) // _LONG_TEXT)
             note = sheet.cell(row, 3, _full_note(field))
             note.font = NOTE_FONT
-            note.alignment = Alignment(vertical="top", wrap_text=not self.has_tables)
+            note.alignment = Alignment(vertical="top", wrap_text=not self.has_tables, indent=1)
             row += 1
         return row
 
@@ -275,14 +276,15 @@ class _SheetWriter:
         head = row + 1
         for offset, (field, header) in enumerate(zip(fields, headers, strict=True)):
             cell = sheet.cell(head, column + offset, header)
-            cell.font = Font(bold=True, color="FFFFFF" if field.required else DARK, italic=not field.required)
+            cell.font = font(bold=True, color="FFFFFF" if field.required else DARK, italic=not field.required)
             cell.fill = REQUIRED_HEAD if field.required else OPTIONAL_HEAD
             cell.border = OPTIONAL_BORDER
             cell.alignment = Alignment(wrap_text=True, vertical="center")
             if field is table.per_class:
                 cell.fill, cell.font = REQUIRED_HEAD, WHITE_BOLD
             self._widen(column + offset, _WIDTHS.get(field.kind, 14))
-        sheet.row_dimensions[head].height = 32
+        words = max(len(field.label) / _WIDTHS.get(field.kind, 14) for field in fields)
+        sheet.row_dimensions[head].height = 16 * max(2, math.ceil(1.2 * words))
         count = max(table.blank_rows, len(rows) + 2 if table.name != "people" else 2)
         for number in range(count):
             values = rows[number] if number < len(rows) else {}
