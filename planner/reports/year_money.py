@@ -1,0 +1,117 @@
+"""Money of this year in whole units that add up: one source for page one and the instructions."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import date
+
+from planner.household import Household
+from planner.plan_record import AccountInstruction, Plan
+from planner.reports.figures import add_up, rounded
+
+# Amounts below half a unit print as 0 and are left out.
+_NOTHING = 0.5
+
+
+@dataclass(frozen=True, slots=True)
+class MoneyLine:
+    """A source of this year's money: `amount` in whole units; `account` None for an income."""
+
+    label: str
+    amount: int
+    account: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class YearMoney:
+    """sum(lines) - tax - kept = spending, in whole units, to the unit."""
+
+    lines: tuple[MoneyLine, ...]
+    coming_in: int
+    tax: int
+    kept: int
+    spending: int
+
+    @property
+    def from_accounts(self) -> int:
+        """What is taken out of savings."""
+        return sum(line.amount for line in self.lines if line.account is not None)
+
+
+def year_money(plan: Plan) -> YearMoney:
+    """Round this year's sources, tax and spending so that they add up on paper.
+
+    Incomes or withdrawals that the plan does not itemise get a line of their own, so nothing is
+    hidden in rounding.
+    """
+    now = plan.this_year
+    named: list[tuple[str, float, str | None]] = [
+        (name, amount, None) for name, amount in now.incomes if abs(amount) >= _NOTHING
+    ]
+    rest = now.income - sum(amount for _, amount in now.incomes)
+    if abs(rest) >= _NOTHING:
+        label = "One-off sums and other income" if rest > 0 else "Less one-off costs and sums paid in"
+        named.append((label, rest, None))
+    by_type = {
+        "taxable": now.withdraw_taxable,
+        "tax-deferred": now.withdraw_tax_deferred,
+        "tax-free": now.withdraw_tax_free,
+    }
+    for account_type, total in by_type.items():
+        listed = [a for a in now.accounts if a.type == account_type]
+        named.extend((account_label(a), a.withdraw, a.account) for a in listed if a.withdraw >= _NOTHING)
+        other = total - sum(a.withdraw for a in listed)
+        if abs(other) >= _NOTHING:
+            named.append((f"Other {account_type} savings", other, account_type))
+    spending = rounded(now.spending)
+    gap = spending - (sum(amount for _, amount, _ in named) - now.tax - now.kept)
+    # A plan adds up to the cent, so that only rounding is left; anything more is shown.
+    if abs(gap) > 1:
+        named.append(("Other money", gap, None))
+        gap = 0.0
+    # What rounding the spending leaves goes to the tax, which is an estimate anyway.
+    *amounts, tax, kept = add_up((*(amount for _, amount, _ in named), -now.tax + gap, -now.kept), spending)
+    lines = tuple(MoneyLine(n[0], a, n[2]) for n, a in zip(named, amounts, strict=True))
+    return YearMoney(lines, sum(amounts), -tax, -kept, spending)
+
+
+def account_label(account: AccountInstruction) -> str:
+    """Name and kind of an account, for people."""
+    return f"{account.account} ({account.type})"
+
+
+def investment_moves(plan: Plan) -> tuple[tuple[str, str, float], ...]:
+    """(from, to, amount) for money left invested that is not yet in this year's portfolio.
+
+    Amounts are what stays in each account after this year's withdrawal, sale and move to
+    tax-free; accounts whose present portfolio is unknown are not listed.
+    """
+    moves: dict[str, float] = {}
+    for account in plan.this_year.accounts:
+        if account.held_now is None or account.held_now == plan.this_year.portfolio:
+            continue
+        moves[account.held_now] = moves.get(account.held_now, 0.0) + stays_invested(account)
+    return tuple(
+        (name, plan.this_year.portfolio, amount) for name, amount in moves.items() if amount >= _NOTHING
+    )
+
+
+def stays_invested(account: AccountInstruction) -> float:
+    """Balance less what is sold, withdrawn and moved out this year."""
+    return max(0.0, account.balance - max(account.sell, account.withdraw) - account.convert)
+
+
+def unknown_holdings(plan: Plan) -> tuple[str, ...]:
+    """Accounts with money whose present portfolio the workbook does not name."""
+    return tuple(
+        a.account for a in plan.this_year.accounts if a.held_now is None and stays_invested(a) >= _NOTHING
+    )
+
+
+def tax_year_end(household: Household) -> date:
+    """Last day to act in the tax year of the plan date: 5 April under UK rules, else 31 December."""
+    day = household.plan_date
+    if household.tax_rules.lower().startswith("uk"):
+        end = date(day.year, 4, 5)
+        return end if day <= end else date(day.year + 1, 4, 5)
+    return date(day.year, 12, 31)
