@@ -76,13 +76,17 @@ class Felicity:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class CashTable:
-    """G in certainty-equivalent units on nodes of (tax-deferred, cash, tax-free).
+    """G in certainty-equivalent units on nodes of (tax-deferred, money, tax-free).
+
+    Money is cash M; where conversions are allowed it is M + tax-free, at given tax-free: there the
+    value hardly depends on tax-free (not at all once spending draws on it), so that coarse nodes
+    along tax-free do.
 
     Attributes
     ----------
     grid : CashGrid
     level, slope : ndarray of shape (n2, n_cash, n3)
-        g^-1(G / weight) and its slope along cash (envelope theorem: marginal utility).
+        g^-1(G / weight) and its slope along money (envelope theorem: marginal utility).
     """
 
     grid: CashGrid
@@ -116,6 +120,7 @@ def cash_table(
     taxable: FloatArray,
     tax_free: FloatArray,
     weight: float,
+    pooled: bool = False,
 ) -> CashTable:
     """Solve the inner choice on every node of (tax-deferred, cash, tax-free).
 
@@ -125,6 +130,8 @@ def cash_table(
         Account nodes.
     weight : float
         A_V(t, h), the weight of this year's value.
+    pooled : bool
+        The grid is of cash + tax-free instead of cash.
     """
     smooth = felicity.smooth
     level, w = following.level, following.weight
@@ -137,7 +144,8 @@ def cash_table(
         price1 = np.zeros_like(level)
     spend1 = felicity.spend(price1)
     knots1 = np.maximum.accumulate(spend1 + taxable[:, None], axis=1)
-    index = _bracket(m[None, :, None], knots1)
+    cash_nodes = m[:, None] - (tax_free if pooled else 0.0 * tax_free)
+    index = _bracket(cash_nodes, knots1)
     if n3 > 1:
         price3 = (
             w * smooth.marginal(level[:, 0]) * np.maximum(following.slope3, TINY_SLOPE)
@@ -150,7 +158,7 @@ def cash_table(
         price3 = spend3 = np.zeros((n2, n3))
         first_need = np.full((n2, 1, n3), -np.inf)
 
-    cash = np.broadcast_to(m[None, :, None], shape)
+    cash = np.broadcast_to(cash_nodes, shape)
     left_copy = np.zeros(m.size, dtype=bool)
     left_copy[grid.kink] = True
 
@@ -165,7 +173,16 @@ def cash_table(
     if some[0].size:
         j, k, i3 = some
         c, lvl, price = _solve_along(
-            m[k], index[some], taxable, (j, i3), knots1, spend1, level, following.slope1, felicity, w
+            cash_nodes[k, i3],
+            index[some],
+            taxable,
+            (j, i3),
+            knots1,
+            spend1,
+            level,
+            following.slope1,
+            felicity,
+            w,
         )
         spending[some], marginal[some] = c, price
         later[some] = w * smooth.value(lvl) if w else 0.0
@@ -174,7 +191,7 @@ def cash_table(
     draw = np.nonzero((index < 0) & (cash < first_need))
     if n3 > 1 and draw[0].size:
         j, k, i3 = draw
-        total = m[k] + tax_free[i3]
+        total = cash_nodes[k, i3] + tax_free[i3]
         knots3 = np.maximum.accumulate(spend3 + tax_free, axis=1)[:, :, None]
         inside = (total[:, None] >= knots3[j, :, 0]).sum(axis=1) - 1
         c = np.array(total)  # everything is spent where even tax-free runs out
@@ -202,8 +219,8 @@ def cash_table(
 
 
 def _bracket(points: FloatArray, knots: FloatArray) -> IntArray:
-    """Last knot at or below each point: (1, m, 1), (n2, n, n3) -> (n2, m, n3); -1 where none."""
-    count = np.zeros((knots.shape[0], points.shape[1], knots.shape[2]), dtype=np.int64)
+    """Last knot at or below each point: (m, n3), (n2, n, n3) -> (n2, m, n3); -1 where none."""
+    count = np.zeros((knots.shape[0], *points.shape), dtype=np.int64)
     for i in range(knots.shape[1]):
         count += points >= knots[:, i : i + 1]
     return count - 1
@@ -230,7 +247,7 @@ def _solve_along(
     k = np.minimum(index, nodes.size - 2)
     left, right = nodes[k], nodes[k + 1]
     at0, at1 = knots[j, k, other], knots[j, k + 1, other]
-    rise = np.maximum(at1 - at0, 1e-300)
+    rise = np.maximum(at1 - at0, 1e-9 * (right - left))
     y = left + (right - left) * np.maximum(money - at0, 0.0) / rise
     slope_of_spending = np.maximum((spend[j, k + 1, other] - spend[j, k, other]) / (right - left), 0.0)
     corners = (level[j, k, other], level[j, k + 1, other], slope[j, k, other], slope[j, k + 1, other])
@@ -240,7 +257,7 @@ def _solve_along(
         lvl, rate = hermite(y, left, right, corners)
         price = weight * felicity.smooth.marginal(lvl) * np.maximum(rate, TINY_SLOPE)
         if step < NEWTON_STEPS:
-            excess = y + felicity.spend(price) - money
+            excess = y + np.minimum(felicity.spend(price), money) - money
             y = np.clip(y - excess / (1.0 + slope_of_spending), left, highest)
     y = np.minimum(y, np.maximum(money, 0.0))
     return money - y, lvl, price

@@ -59,7 +59,7 @@ class Situation:
 
 
 class Surface:
-    """Hermite interpolation of a cash table in cash, tax-deferred and (for conversions) tax-free.
+    """Hermite interpolation of a cash table in money, tax-deferred and (for conversions) tax-free.
 
     Once continuously differentiable, so the first-order condition has a root to find.
     """
@@ -171,16 +171,9 @@ class Outer:
         if not s.conversions:
             cash = self.nodes1[i] + s.income + g - tax
             return cash, np.maximum(x2 - g, 0.0), l3, None, 1.0 - slope_of_tax, 0.0
-        kept = s.minimum_share * x2
-        cash = self.nodes1[i] + s.income + kept - tax
-        free = self.nodes3[l3] + g - kept
-        short = np.minimum(cash, 0.0)  # cash that tax has used up comes from tax-free, exactly
-        free = free + short
-        beyond = np.minimum(free, 0.0)
-        drawn = cash < 0
-        cash_slope = np.where(drawn, np.where(beyond < 0, 1.0 - slope_of_tax, 0.0), -slope_of_tax)
-        free_slope = np.where(drawn, np.where(beyond < 0, 0.0, 1.0 - slope_of_tax), 1.0)
-        return cash - short + beyond, np.maximum(x2 - g, 0.0), l3, free - beyond, cash_slope, free_slope
+        pool = self.nodes1[i] + self.nodes3[l3] + s.income + g - tax
+        free = self.nodes3[l3] + g - s.minimum_share * x2
+        return pool, np.maximum(x2 - g, 0.0), l3, free, 1.0 - slope_of_tax, 1.0
 
     def evaluate(self, point: IntArray, g: FloatArray, slope_of_tax: FloatArray):  # noqa: ANN201
         """Level, its total slope in g, and its slope along cash."""

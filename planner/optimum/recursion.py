@@ -27,13 +27,22 @@ from planner.problem import Problem
 
 @dataclass(frozen=True, slots=True)
 class SolverSettings:
-    """Grid sizes: nodes for taxable, tax-deferred, tax-free and cash; tops as multiples of wealth."""
+    """Grids: nodes for taxable, tax-deferred, tax-free and cash; their top and scale.
+
+    Attributes
+    ----------
+    top : float
+        Largest balance on a grid, in multiples of wealth and the largest yearly receipt.
+    scale : float
+        Below wealth / `scale` nodes are about evenly spaced, above it in proportion.
+    """
 
     taxable: int = 16
-    tax_deferred: int = 16
+    tax_deferred: int = 22
     tax_free: int = 10
     cash: int = 60
-    top: float = 6.0
+    top: float = 4.0
+    scale: float = 25.0
 
     def scaled(self, factor: float) -> SolverSettings:
         """The same with every grid `factor` times as fine."""
@@ -62,7 +71,7 @@ def value_weights(problem: Problem) -> tuple[FloatArray, FloatArray]:
 
 
 def build_grids(problem: Problem, settings: SolverSettings) -> tuple[LogGrid, LogGrid, LogGrid]:
-    """Account grids: scale = opening balances / 50, the top covering receipts and growth."""
+    """Account grids: the top covers receipts and growth."""
     essential = problem.utility.essential
     wealth = max(problem.wealth, essential)
     receipts = float(np.maximum(problem.income, 0.0).max(axis=1).max(initial=0.0))
@@ -70,7 +79,8 @@ def build_grids(problem: Problem, settings: SolverSettings) -> tuple[LogGrid, Lo
     sizes = (settings.taxable, settings.tax_deferred, settings.tax_free)
     exists = problem.has_account
     grids = [
-        LogGrid.build(n if there else 1, wealth / 50, top) for n, there in zip(sizes, exists, strict=True)
+        LogGrid.build(n if there else 1, wealth / settings.scale, top)
+        for n, there in zip(sizes, exists, strict=True)
     ]
     return grids[0], grids[1], grids[2]
 
@@ -85,7 +95,8 @@ def cash_range(problem: Problem, grids: tuple[LogGrid, LogGrid, LogGrid]) -> tup
             kept = float(np.min(tax.x - tax.y)) if tax.x.size > 1 else -float(tax.y[0])
             low = min(low, float(problem.income[t, h]) + min(kept, 0.0))
             high = max(high, float(problem.income[t, h]))
-    return low - 1.0, high + grids[0].nodes[-1] + grids[1].nodes[-1]
+    pooled = grids[2].nodes[-1] if problem.conversions else 0.0
+    return low - 1.0, high + grids[0].nodes[-1] + grids[1].nodes[-1] + pooled
 
 
 def solve(
@@ -145,7 +156,13 @@ def solve(
                 settings.cash, grids[0].scale, low, high, felicity.need * problem.utility.essential
             )
             table = cash_table(
-                following_level, felicity, grid, grids[0].nodes, grids[2].nodes, float(weights[t, h])
+                following_level,
+                felicity,
+                grid,
+                grids[0].nodes,
+                grids[2].nodes,
+                float(weights[t, h]),
+                problem.conversions,
             )
             surface = Surface(table, grids[1], grids[2], slopes[1], slopes[2])
             situation = Situation(
