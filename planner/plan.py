@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import difflib
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -61,8 +61,8 @@ class PlanSettings:
     n_what_if_paths : int
         Drawn futures for each what-if.
     seed : int
-    solver, what_if_solver : SolverSettings
-        Grids; coarser ones do for what-ifs (0.1 % of the value on a couple with three accounts).
+    solver : SolverSettings
+        Grids; what-ifs use the same ones, so that their errors drop out of comparisons.
     rules : tuple of str or None
         Keys of the rules to compare with; None = all.
     what_ifs : bool
@@ -73,7 +73,6 @@ class PlanSettings:
     n_what_if_paths: int = 5_000
     seed: int = 20260101
     solver: SolverSettings = SolverSettings()  # noqa: RUF009 - it is frozen
-    what_if_solver: SolverSettings = SolverSettings(12, 12, 8, 48)  # noqa: RUF009 - it is frozen
     rules: tuple[str, ...] | None = None
     what_ifs: bool = True
 
@@ -237,7 +236,7 @@ def make_plan(
     strategies += (_simulated(solved, banded, banded.key, settings),)
 
     facts = first_year(household)
-    now = paths_first_choice(solved)
+    now = first_choice(solved)
     instructions = this_year(household, problem, facts, now)
     middle = next_opening(problem, paths)
     plan_year = household.plan_date.year
@@ -284,12 +283,17 @@ def make_plan(
     )
 
 
-def paths_first_choice(solved: Solved) -> Choice:
+SMALLEST_MOVE = 0.001
+"""A conversion below this share of savings is within the solver's accuracy, and not instructed."""
+
+
+def first_choice(solved: Solved) -> Choice:
     """What the optimum does in year 0, the same on every path."""
     paths = solved.paths
+    convert = float(paths.conversion[0, 0])
     return Choice(
         withdraw=float(paths.withdrawal[0, 0, 1]),
-        convert=float(paths.conversion[0, 0]),
+        convert=convert if convert >= SMALLEST_MOVE * solved.problem.wealth else 0.0,
         spending=float(paths.spending[0, 0]),
         portfolio=int(paths.portfolio[0, 0]),
     )
@@ -364,8 +368,7 @@ def _what_if_households(read: ReadWorkbook) -> Sequence[tuple[str, Household]]:
 
 
 def _what_if_result(name: str, household: Household, late_year: int, settings: PlanSettings) -> WhatIfResult:
-    coarse = replace(settings, solver=settings.what_if_solver)
-    solved = solve_household(household, coarse, settings.n_what_if_paths)
+    solved = solve_household(household, settings, settings.n_what_if_paths)
     optimum = strategy_result(
         solved.problem, solved.policy, PLAN_KEY, solved.paths, solved.late, solved.yardstick
     )
