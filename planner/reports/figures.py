@@ -104,7 +104,7 @@ def of_futures(share: float) -> str:
     if not 0 <= share <= 1:
         raise ValueError(f"a chance is between 0 and 1, not {share}")
     if share == 0:
-        return "none"
+        return "no"
     if share == 1:
         return "all"
     if share > 0.99:
@@ -159,6 +159,11 @@ def number(value: float, decimals: int = 2) -> str:
     """A plain number without trailing zeros."""
     text = f"{value:.{decimals}f}"
     return text.rstrip("0").rstrip(".") if "." in text else text
+
+
+def capitalised(text: str) -> str:
+    """With a capital first letter."""
+    return text[:1].upper() + text[1:]
 
 
 def add_up(parts: Iterable[float], total: int) -> tuple[int, ...]:

@@ -75,6 +75,7 @@ def style(
         allowWidows=0,
         allowOrphans=0,
         splitLongWords=1,
+        spaceShrinkage=0,  # a line never runs past its column
     )
 
 
@@ -102,6 +103,11 @@ def _needs(blocks: Sequence[Block]) -> float:
             return total + 45 + min(3, len(block.rows)) * 26
         elif isinstance(block, Signatures):
             return total + 110
+        elif isinstance(block, Text):
+            # A text between a heading and its table or chart stays with both.
+            total += 8 + 16 * (1 + len(block.text) // 90)
+            if total > 200:
+                return total
         else:
             return total + 48
     return total
@@ -151,14 +157,10 @@ class HeadingFlowable(Paragraph):  # type: ignore[misc]
 
     def draw(self) -> None:
         """Draw, and mark the place."""
-        canvas = self.canv
         if self._level < 3:
-            key = f"part{self._part}" if self._part is not None else f"place{canvas.next_place()}"
-            canvas.bookmarkHorizontal(key, 0, self.height + 4)
-            canvas.addOutlineEntry(self._outline, key, self._level - 1, closed=self._level == 1)
+            _, top = self.canv.absolutePosition(0, self.height + 4)
+            self.canv.note_heading(self._outline, self._level - 1, self._part, top)
         super().draw()
-        if self._part is not None:
-            canvas.note_part(self._part)
 
 
 def _hex(color: Color) -> str:
@@ -236,7 +238,12 @@ def _(block: KeyFigures, width: float) -> list[Any]:
             size -= 1
         # The baselines of the figures line up whatever their sizes.
         look = ParagraphStyle(
-            f"figure{size}", fontName=BOLD, fontSize=size, leading=38, textColor=ACCENT if i == 0 else INK
+            f"figure{size}",
+            fontName=BOLD,
+            fontSize=size,
+            leading=size + 8,
+            spaceBefore=30 - size,
+            textColor=ACCENT if i == 0 else INK,
         )
         cells.append(
             [
@@ -407,6 +414,15 @@ class Furniture:
     parts: tuple[tuple[int, str], ...]
 
 
+def _shortened(texts: Sequence[str], available: float) -> list[str]:
+    """Texts that together fit on a footer line: the longest are cut, the others stay whole."""
+    widths = [text_width(plain(t), REGULAR, _FOOTER) for t in texts]
+    limit = max(widths)
+    while sum(min(w, limit) for w in widths) > available:
+        limit -= 1
+    return [fitted(t, REGULAR, _FOOTER, limit) for t in texts]
+
+
 class PageCanvas(Canvas):  # type: ignore[misc]
     """A canvas that draws footers and contents last, when the number of pages is known."""
 
@@ -416,16 +432,14 @@ class PageCanvas(Canvas):  # type: ignore[misc]
         self._pages: list[dict[str, Any]] = []
         self._part_pages: dict[int, int] = {}
         self._contents: tuple[int, float, float, float, float] | None = None
-        self._place = 0
+        self._headings: list[tuple[int, str, str, int, float]] = []
 
-    def next_place(self) -> int:
-        """Number for a bookmark."""
-        self._place += 1
-        return self._place
-
-    def note_part(self, part: int) -> None:
-        """Remember the page on which a part starts."""
-        self._part_pages[part] = self._pageNumber
+    def note_heading(self, title: str, level: int, part: int | None, top: float) -> None:
+        """Remember a heading: a bookmark can only be set when its page is written."""
+        key = f"place{len(self._headings)}" if part is None else f"part{part}"
+        self._headings.append((self._pageNumber, key, title, level, top))
+        if part is not None:
+            self._part_pages[part] = self._pageNumber
 
     def note_contents(self, x: float, y: float, width: float, height: float) -> None:
         """Remember where the contents belong."""
@@ -438,10 +452,14 @@ class PageCanvas(Canvas):  # type: ignore[misc]
 
     def save(self) -> None:
         """Add footers and contents to every page, then write."""
-        pages, parts, contents = self._pages, self._part_pages, self._contents
+        pages, parts, contents, headings = self._pages, self._part_pages, self._contents, self._headings
         for state in pages:
             self.__dict__.update(state)
             self._footer(len(pages))
+            for page, key, title, level, top in headings:
+                if page == self._pageNumber:
+                    self.bookmarkHorizontal(key, 0, top)
+                    self.addOutlineEntry(title, key, level, closed=level == 0)
             if contents is not None and contents[0] == self._pageNumber:
                 self._draw_contents(contents[1:], parts)
             super().showPage()
@@ -457,9 +475,8 @@ class PageCanvas(Canvas):  # type: ignore[misc]
         self.setFont(REGULAR, _FOOTER)
         page = f"page {self._pageNumber} of {n_pages}"
         self.drawRightString(right, 33, page)
-        room = (right - left - 80) / len(furniture.first_line)
-        words = [fitted(t, REGULAR, _FOOTER, room) for t in furniture.first_line]
-        self.drawString(left, 33, "  ·  ".join(words))
+        line = "  ·  ".join(_shortened(furniture.first_line, right - left - 110))
+        self.drawString(left, 33, line)
         self.drawString(left, 23, fitted(furniture.second_line, REGULAR, _FOOTER, right - left))
         if furniture.draft:
             top = self._pagesize[1]

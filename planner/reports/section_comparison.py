@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from planner.plan_record import Plan, StrategyResult
 from planner.reports.blocks import Block, Column, CostChart, Heading, Table, Text
-from planner.reports.figures import MINUS, Money, number, percent
+from planner.reports.figures import MINUS, Money, capitalised, number, percent
 from planner.reports.section_year import required_wording
 from planner.reports.wording import PROOF_FOR_ANALYSTS, RULES_INTRODUCTION, WORTH_STEADY, futures_tested
 
@@ -29,7 +29,7 @@ def compared_with_rules(plan: Plan) -> tuple[Block, ...]:
 
 
 def _name(plan: Plan, result: StrategyResult) -> str:
-    return "This plan" if result is plan.strategies[0] else result.name
+    return "This plan" if result is plan.strategies[0] else capitalised(result.name)
 
 
 def _cost(result: StrategyResult, money: Money) -> str:
@@ -154,7 +154,7 @@ def what_if(plan: Plan) -> tuple[Block, ...]:
     for result in plan.what_ifs:
         change = result.spending_this_year - base
         cells = [
-            result.name,
+            capitalised(result.name),
             money.about_cell(result.spending_this_year),
             _change(change, money),
             money.about_cell(result.spending_p10_late),

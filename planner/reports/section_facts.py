@@ -6,7 +6,18 @@ from typing import Final
 
 from planner.household import JOINT, Household, Income, OneOff, Rise, WhatIf
 from planner.plan_record import Plan
-from planner.reports.blocks import Block, Bullets, Column, Facts, Heading, NewPage, Signatures, Table, Text
+from planner.reports.blocks import (
+    Block,
+    Bullets,
+    Column,
+    Contents,
+    Facts,
+    Heading,
+    NewPage,
+    Signatures,
+    Table,
+    Text,
+)
 from planner.reports.figures import DASH, Money, age_words, day_words, listed, number, percent
 from planner.reports.wording import ACCOUNT_TYPES, DRAFT, INCOME_KINDS, SUITABILITY_TEXTS
 
@@ -18,6 +29,7 @@ def what_you_told_us(plan: Plan) -> tuple[Block, ...]:
     household = plan.household
     blocks: list[Block] = [
         NewPage(),
+        Contents(),
         Heading("What you told us", 1, 2),
         Text(
             "Please read this, correct what is wrong and sign. The plan is only as good as these facts. "
@@ -333,7 +345,7 @@ def _what_ifs(household: Household) -> tuple[Block, ...]:
 
 
 def _what_if_words(what_if: WhatIf) -> str:
-    changes = listed([f"{address} becomes {value}" for address, value in what_if.changes])
+    changes = listed([f"{address} becomes {value.strip() or 'blank'}" for address, value in what_if.changes])
     return f"{what_if.name}: {changes}"
 
 

@@ -6,7 +6,6 @@ from planner.plan_record import Plan, StrategyResult
 from planner.reports.blocks import (
     BarRow,
     Block,
-    Contents,
     Facts,
     Heading,
     KeyFigure,
@@ -19,6 +18,8 @@ from planner.reports.figures import Money, day_words, listed, of_futures, one_ye
 from planner.reports.wording import (
     ASSUMPTIONS,
     CALL_US,
+    CALL_US_COUPLE,
+    CALL_US_SINGLE,
     CHECK_TAX,
     ESTIMATES,
     SUITABILITY_TEXTS,
@@ -51,8 +52,10 @@ def your_year(plan: Plan) -> tuple[Block, ...]:
         blocks.append(
             Text(f"Draft: the adviser still has to write {listed([m.lower() for m in missing])}.", "strong")
         )
+    first_reason = CALL_US_COUPLE if household.is_couple else CALL_US_SINGLE
     blocks += [
         _figures(plan),
+        Heading("Where it comes from", 3),
         _sources(plan),
         Facts(
             tuple(
@@ -63,7 +66,7 @@ def your_year(plan: Plan) -> tuple[Block, ...]:
                     _next_review(plan),
                     _bills(plan),
                     _safety(plan),
-                    ("Call us first if", "; ".join(CALL_US) + "."),
+                    ("Call us first if", "; ".join((first_reason, *CALL_US)) + "."),
                 )
                 if row[1]
             )
@@ -73,7 +76,6 @@ def your_year(plan: Plan) -> tuple[Block, ...]:
             f"{ESTIMATES} All amounts are in today's money. {ASSUMPTIONS} Part 6 explains 'futures tested'.",
             "note",
         ),
-        Contents(),
     ]
     return (OnePage(tuple(blocks)),)
 

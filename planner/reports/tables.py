@@ -19,6 +19,8 @@ from planner.reports.fonts import BOLD, REGULAR, markup, plain, width
 LARGEST = 9.5
 SMALLEST = 5.0
 _PADDING = 4.0
+# Room that no column needs goes to text rather than between figures.
+_TEXT_WEIGHT = 2.5
 
 
 @cache
@@ -31,6 +33,7 @@ def _style(size: float, bold: bool, align: int, color: Color = INK) -> Paragraph
         textColor=color,
         alignment=align,
         splitLongWords=1,
+        spaceShrinkage=0,
     )
 
 
@@ -98,8 +101,9 @@ def column_widths(table: Table, available: float, size: float) -> list[float]:
     total = sum(wished)
     if total > extra:
         return [a + w * extra / total for a, w in zip(least, wished, strict=True)]
-    rest = (extra - total) / len(least)
-    return [a + w + rest for a, w in zip(least, wished, strict=True)]
+    weights = [_TEXT_WEIGHT if c.align == "left" else 1.0 for c in table.columns]
+    unit = (extra - total) / sum(weights)
+    return [a + w + unit * share for a, w, share in zip(least, wished, weights, strict=True)]
 
 
 def _half(title: str) -> tuple[str, ...]:

@@ -64,8 +64,9 @@ CANNOT_BE_UNDONE = (
 
 CHECK_TAX = "Check this with your tax preparer."
 
+CALL_US_COUPLE = "one of you dies or falls seriously ill, or you separate"
+CALL_US_SINGLE = "you fall seriously ill, marry or separate"
 CALL_US = (
-    "one of you dies, falls seriously ill, marries or separates",
     "you want much more than this, or to give or lend a large sum",
     "an income or a large sum comes or goes, or you sell your home",
     "pension or tax law changes for you",
