@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import difflib
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -247,7 +247,13 @@ def make_plan(
     for number, (name, changed) in enumerate(what_ifs):
         share = end_base + (1 - end_base) * number / len(what_ifs)
         report(share, f"what if: {name}")
-        results.append(_what_if_result(name, changed, late_year, settings))
+        try:
+            results.append(_what_if_result(name, changed, late_year, settings))
+        except InputError as error:
+            raise InputError(
+                replace(problem, message=f"with the what-if {name!r}: {problem.message}")
+                for problem in error.diagnostics
+            ) from None
 
     fees = _fees(household)
     report(1.0, "done")

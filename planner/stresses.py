@@ -51,7 +51,7 @@ def long_life(household: Household) -> Household:
 
 
 def fall_at_the_start(household: Household) -> Household:
-    """Every account loses a fifth today; what it cost stays the same."""
+    """Every account, cash kept aside included, loses a fifth today; what it cost stays the same."""
     accounts = tuple(
         replace(
             account,
@@ -60,7 +60,8 @@ def fall_at_the_start(household: Household) -> Household:
         )
         for account in household.accounts
     )
-    return replace(household, accounts=accounts)
+    aside = household.spending.cash_aside * (1 - FALL_AT_THE_START)
+    return replace(household, accounts=accounts, spending=replace(household.spending, cash_aside=aside))
 
 
 def care(household: Household) -> Household | None:

@@ -11,9 +11,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
-from planner import outcomes
 from planner.banded import KeepWithinBand
-from planner.diagnostics import InputError
+from planner.diagnostics import Diagnostic, InputError
 from planner.household import Account, AccountType, Household, OwnTaxRules, Person, Preferences
 from planner.instructions import Choice, first_year, lifelong_income, this_year
 from planner.optimum.recursion import SolverSettings
@@ -335,8 +334,27 @@ def test_a_client_in_the_last_year_of_the_table():
 
 
 def test_no_savings_at_all():
+    """All income is spent, up to 2 %: on the small grid the first node above 0 is far away."""
     plan = make_plan(read(single(accounts=(Account("Empty", "Lin", AccountType.TAXABLE, 0.0),))), QUICK)
-    assert plan.this_year.spending == 14_000
-    assert plan.band.high == 0
+    assert_adds_up(plan.this_year)
+    assert_allclose(plan.this_year.spending, 14_000, rtol=0.02)
     assert plan.strategies[0].chance_below_essential == 1
-    assert outcomes.HALF_CENT == CENT
+    assert all(result.wealth_cost == 0 for result in plan.strategies)  # there is no wealth to lose
+
+
+def test_fall_at_the_start_leaves_a_household_that_can_be_planned():
+    """All taxable money kept aside: what is kept aside falls with it, or the stress would be refused."""
+    household = single(spending=replace(single().spending, cash_aside=250_000.0))
+    changed = dict(stresses(household))["savings fall by a fifth at the start"]
+    assert build_problem(changed).opening[0] == 0
+
+
+def test_a_problem_in_a_what_if_says_which(monkeypatch):
+    def refuse(*arguments):
+        raise InputError([Diagnostic("some-code", "spending", "it cannot be planned for")])
+
+    monkeypatch.setattr("planner.plan._what_if_result", refuse)
+    with pytest.raises(InputError) as error:
+        make_plan(read(single()), replace(QUICK, what_ifs=True))
+    assert error.value.diagnostics[0].code == "some-code"
+    assert "'returns 1 % lower every year'" in error.value.diagnostics[0].message

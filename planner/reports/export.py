@@ -170,7 +170,7 @@ def results_json(plan: Plan) -> Json:
 
 
 def _this_year(plan: Plan) -> Json:
-    now = plan.this_year
+    now, room = plan.this_year, plan.this_year.room_to_next_threshold
     return {
         "spending": money(now.spending),
         "income": money(now.income),
@@ -199,6 +199,9 @@ def _this_year(plan: Plan) -> Json:
             for row in now.accounts
         ],
         "incomes": [{"income": name, "amount": money(amount)} for name, amount in now.incomes],
+        "bills_covered_by_lifelong_income": share(plan.bills_covered_now),
+        "tax_rate_on_next": share(now.tax_rate_on_next),
+        "room_to_next_threshold": money(room) if math.isfinite(room) else None,
     }
 
 
