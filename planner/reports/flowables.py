@@ -100,7 +100,11 @@ def _needs(blocks: Sequence[Block]) -> float:
         elif isinstance(block, CostChart):
             return total + 45 + 19 * len(block.bars)
         elif isinstance(block, Table):
-            return total + 45 + min(3, len(block.rows)) * 26
+            # A list to tick off stays on one page; other tables may break after three rows.
+            return total + 45 + min(20 if block.blank else 3, len(block.rows)) * 27
+        elif isinstance(block, Facts):
+            # Short lists of facts stay whole.
+            return total + 24 * min(9, len(block.rows))
         elif isinstance(block, Signatures):
             return total + 110
         elif isinstance(block, Text):
@@ -208,7 +212,7 @@ def _(block: Text, width: float) -> list[Any]:
     if block.tone == "caution":
         return [Caution(Paragraph(markup(block.text), style(BODY, True)), ACCENT)]
     if block.tone == "required":
-        return [Caution(Paragraph(markup(block.text), style(9.5)), SOFT_INK)]
+        return [Caution(Paragraph(markup(block.text), style(BODY)), SOFT_INK)]
     looks = {
         "body": style(BODY, after=6),
         "lead": style(12, color=SOFT_INK, after=6),

@@ -18,7 +18,7 @@ def how_it_could_go(plan: Plan) -> tuple[Block, ...]:
         NewPage(),
         Heading("How it could go", 1, 6),
         Text(bills_sentence(plan, plan.strategies[0])),
-        Text(futures_tested(plan.sources.n_paths, household.is_couple), "note"),
+        Text(futures_tested(plan.sources.n_paths, household.is_couple)),
         *required_wording(plan),
         Heading("Spending and savings by age"),
         _spending(plan),

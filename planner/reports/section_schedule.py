@@ -63,9 +63,9 @@ def schedule(plan: Plan) -> tuple[Block, ...]:
         NewPage(),
         Heading("Year by year", 1, 4),
         Text(
-            "What the plan expects to do in each year. Only the first line is an instruction: each later "
-            "year is read "
-            "off anew from what your savings then are (part 5)."
+            "What the plan expects in each year. Exact instructions for this year are in part 3, with this year's "
+            "actual tax; the table uses a planning tax throughout. Each later year is read off anew from what "
+            "your savings then are (part 5)."
         ),
         _sources_chart(plan),
         Heading("How to read the table"),

@@ -74,7 +74,7 @@ def your_year(plan: Plan) -> tuple[Block, ...]:
         *required_wording(plan),
         Text(
             f"{ESTIMATES} All amounts are in today's money. {ASSUMPTIONS} Part 6 explains 'futures tested'.",
-            "note",
+            "body",
         ),
     ]
     return (OnePage(tuple(blocks)),)
