@@ -135,13 +135,13 @@ def _portfolios(household: Household) -> Iterator[Diagnostic]:
 
 def _tax(household: Household) -> Iterator[Diagnostic]:
     rules, shipped_names = household.tax_rules, shipped.tax_rule_names()
+    rate = household.extra_income_tax_rate
+    yield from between("extra_income_tax_rate", rate, 0, 0.5, "rate-range")
     if rules not in ("own", "none") and shipped_names and rules not in shipped_names:
         choices = tuple(dict.fromkeys(("none", "own", *shipped_names)))
         hint = near_miss(rules, choices, "sets are")
         yield Diagnostic("tax-rules-unknown", "tax_rules", f"no tax rules are called {rules!r}; {hint}")
-    rate = household.extra_income_tax_rate
-    yield from between("extra_income_tax_rate", rate, 0, 0.5, "rate-range")
-    if rate is None and rules not in ("own", "none"):
+    elif rate is None and rules not in ("own", "none"):
         message = (
             f"{rules} leaves out state or regional income tax; give its rate on the sheet Tax, "
             "0 if there is none"

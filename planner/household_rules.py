@@ -276,7 +276,7 @@ def _spending(household: Household) -> Iterator[Diagnostic]:
     )
     yield from amount("spending.cash_aside", spending.cash_aside)
     taxable = sum(a.balance for a in household.accounts if a.type is AccountType.TAXABLE)
-    if spending.cash_aside > taxable:
+    if spending.cash_aside > max(taxable, 0.0):
         message = f"found {spending.cash_aside:,.0f}; the taxable accounts hold {taxable:,.0f}"
         yield Diagnostic("cash-aside-above-taxable", "spending.cash_aside", message)
     yield from _care(household)

@@ -109,9 +109,8 @@ SINGLE_WITH_PENSION: Values = {
         "share in markets "
         "stays within the agreed level.",
         drawbacks="The school pension does not rise with prices, so more has to come from savings later.",
-        alternatives_considered="A lifelong annuity for half of the rollover account; set aside for now because "
-        "it "
-        "cannot be undone.",
+        alternatives_considered="A lifelong annuity for half of the rollover account; set aside for now "
+        "because it cannot be undone.",
     ),
 }
 

@@ -288,6 +288,8 @@ class _Builder:
             wanted += [
                 (normalised(n), n, True) for n in self.class_names if normalised(n) not in data.headers
             ]
+        if table.per_class is not None and not self.class_names:
+            unknown = {}  # the sheet Markets could not be read, so any of them may be an asset class
         for key, text in unknown.items():
             near = difflib.get_close_matches(key, [k for k, _, _ in wanted], n=1)
             hint = next((f"; did you mean {label!r}?" for k, label, _ in wanted if near and k == near[0]), "")

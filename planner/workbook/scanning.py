@@ -238,7 +238,10 @@ class _SheetScanner:
         return found
 
     def _header_row(self, table: Table) -> int | None:
-        """Return the row with the most of the table's columns; at least two, one of them exact."""
+        """Return the row with the most of the table's columns: two, or one beside a near miss.
+
+        The first column beside any other text will do where columns are named after asset classes.
+        """
         best, best_count = None, 1.0
         known = [column.key for column in table.columns]
         for row, entries in self.by_row.items():
@@ -248,8 +251,9 @@ class _SheetScanner:
             others = [normalised(e.text) for n, e in entries.items() if n not in exact.values()]
             rest = [key for key in known if key not in exact]
             near = sum(bool(difflib.get_close_matches(text, rest, n=1, cutoff=0.8)) for text in others)
-            count = len(exact) + 0.5 * near
-            if count > best_count and len(exact) + near >= min(2, len(known)):
+            has_classes = table.per_class is not None and known[0] in exact and bool(others)
+            count = len(exact) + 0.5 * (near + has_classes)
+            if count > best_count:
                 best, best_count = row, count
         return best
 
@@ -369,8 +373,9 @@ class _SheetScanner:
         )
         key_column = columns.get(table.columns[0].key, first)
         rows = []
-        for row in range(header_row + 1, end):
-            entries = self.by_row.get(row, {})
+        for row, entries in self.by_row.items():
+            if not header_row < row < end:
+                continue
             picked = {
                 key: entries.get(number, Entry(f"{self.title}!{get_column_letter(number)}{row}", None))
                 for key, number in columns.items()

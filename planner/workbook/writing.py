@@ -2,9 +2,8 @@
 
 from __future__ import annotations
 
+import io
 import math
-import os
-import tempfile
 from collections.abc import Mapping, Sequence
 from datetime import date, datetime
 from pathlib import Path
@@ -18,6 +17,7 @@ from openpyxl.worksheet.datavalidation import DataValidation
 from openpyxl.worksheet.worksheet import Worksheet
 
 from planner.diagnostics import PlannerError
+from planner.files import write_whole
 from planner.workbook.data import CellValue
 from planner.workbook.fields import Field, Form, Kind, Sheet, Table
 from planner.workbook.guide import write_guide
@@ -105,21 +105,9 @@ def write_workbook(values: Values, path: str | Path, *, remark: str = "") -> Non
     target = Path(path)
     if target.exists():
         raise PlannerError(f"{target} is there already and was left as it is; choose another name")
-    workbook = make_workbook(values, remark=remark)
-    handle, temporary = tempfile.mkstemp(suffix=".xlsx", dir=target.parent)
-    os.close(handle)
-    try:
-        workbook.save(temporary)
-        # A link, unlike a rename, fails if somebody made the file in the meantime.
-        try:
-            os.link(temporary, target)
-        except FileExistsError:
-            raise PlannerError(f"{target} is there already and was left as it is") from None
-        except OSError:  # file systems without links
-            os.replace(temporary, target)
-            return
-    finally:
-        Path(temporary).unlink(missing_ok=True)
+    content = io.BytesIO()
+    make_workbook(values, remark=remark).save(content)
+    write_whole(target, content.getvalue())
 
 
 def make_workbook(values: Values, *, remark: str = "") -> Workbook:
