@@ -63,8 +63,10 @@ def schedule(plan: Plan) -> tuple[Block, ...]:
         NewPage(),
         Heading("Year by year", 1, 4),
         Text(
-            "What the plan expects in each year. Exact instructions for this year are in part 3, with this year's "
-            "actual tax; the table uses a planning tax throughout. Each later year is read off anew from what "
+            "What the plan expects in each year. Exact instructions for this year are in part 3, with "
+            "this year's "
+            "actual tax; the table uses a planning tax throughout. Each later year is read off anew from "
+            "what "
             "your savings then are (part 5)."
         ),
         _sources_chart(plan),
