@@ -146,6 +146,9 @@ def plan(
         bool,
         typer.Option("--password", help=f"Protect the PDF; asked for, or from {PASSWORD_VARIABLE}."),
     ] = False,
+    what_ifs: Annotated[
+        bool, typer.Option("--what-ifs/--no-what-ifs", help="Also plan for each what-if (part 8).")
+    ] = True,
     futures: Futures = None,
     seed: Seed = None,
     verbose: Annotated[bool, typer.Option("--verbose", help="Say on stderr what is done and how.")] = False,
@@ -157,6 +160,8 @@ def plan(
         _refuse_clashes(client, {option: path for option, path in files.items() if path is not None})
         secret = _password() if password else None
 
+        from dataclasses import replace
+
         from planner.files import write_whole
         from planner.plan import make_plan
         from planner.reports.terminal import plan_summary
@@ -166,7 +171,7 @@ def plan(
         errors = Console(stderr=True, highlight=False)
         for warning in read.warnings:
             print_problem(warning, errors)
-        settings = _settings(futures, seed)
+        settings = replace(_settings(futures, seed), what_ifs=what_ifs)
         with _progress(errors, verbose) as progress:
             made = make_plan(read, settings, progress, client.name)
         # Everything is made before anything is written.
