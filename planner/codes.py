@@ -33,7 +33,6 @@ CELL_CODES: Final[dict[str, str]] = {
     "value-missing": "a required cell is blank",
     "formula-not-computed": "a formula with no stored value",
     "cell-error": "a spreadsheet error such as #REF!",
-    "not-text": "a name or text was expected",
     "not-money": "an amount of money was expected",
     "money-abbreviated": "an amount in thousands or millions (12.5k)",
     "money-separator": "separators that can be read in two ways (1.250,00)",

@@ -8,7 +8,7 @@ from dataclasses import replace
 from planner.diagnostics import Diagnostic, InputError
 from planner.workbook.addresses import replaced
 from planner.workbook.fields import normalised
-from planner.workbook.layout import IN_THE_PLAN
+from planner.workbook.layout_client import IN_THE_PLAN
 from planner.workbook.reading import ReadWorkbook, build
 
 

@@ -1,7 +1,9 @@
 """Rules of a household: each is broken once, and names its code and field."""
 
+import re
 from dataclasses import replace
 from datetime import date
+from pathlib import Path
 
 import pytest
 from households import MARKETS, couple, single
@@ -318,3 +320,14 @@ def test_level_means_of_savings_at_a_return_equal_to_inflation():
 
 def test_every_code_tried_here_is_in_the_table():
     assert {case[0] for case in (*ERRORS, *WARNINGS)} <= set(CODES)
+
+
+def test_codes_in_the_program_are_those_in_the_table():
+    """Both ways, for the modules about the household and its workbook."""
+    root = Path(__file__).parents[1] / "planner"
+    sources = [root / f"{name}.py" for name in ("household_rules", "assumption_rules", "checks", "scenarios")]
+    sources += sorted((root / "workbook").glob("*.py"))
+    text = "\n".join(path.read_text("utf-8") for path in sources)
+    used = set(re.findall(r'(?:Diagnostic|CellProblem|refuse|say)\(\s*"([a-z-]+)"', text))
+    assert used <= set(CODES)
+    assert {code for code in CODES if f'"{code}"' not in text} == set()

@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 from planner.household import Rise
 from planner.workbook import parsing
 from planner.workbook.data import Entry
-from planner.workbook.layout import ACCOUNT_TYPES
+from planner.workbook.layout_client import ACCOUNT_TYPES
 
 
 def entry(value, is_percentage=False):

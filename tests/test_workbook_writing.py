@@ -27,7 +27,8 @@ from planner.household import (
 from planner.workbook import parsing
 from planner.workbook.data import Entry
 from planner.workbook.fields import Form, Kind, choice_value, normalised
-from planner.workbook.layout import GUIDE_SHEET, IN_THE_PLAN, LISTS_SHEET, SHEETS, shown_choices
+from planner.workbook.layout import GUIDE_SHEET, LISTS_SHEET, SHEETS, shown_choices
+from planner.workbook.layout_client import IN_THE_PLAN
 from planner.workbook.reading import read_workbook
 from planner.workbook.writing import make_workbook, write_blank, write_workbook
 

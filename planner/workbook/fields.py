@@ -76,6 +76,28 @@ class Field:
         return normalised(self.label)
 
 
+def needed(
+    label: str, kind: Kind, target: str, note: str, *, choices: tuple[str, ...] = (), names_of: str = ""
+) -> Field:
+    """Return a field that must be filled in."""
+    return Field(label, kind, note, target, required=True, choices=choices, names_of=names_of)
+
+
+def optional(
+    label: str,
+    kind: Kind,
+    target: str,
+    note: str,
+    *,
+    default: str = "",
+    blank_means: str = "",
+    choices: tuple[str, ...] = (),
+    names_of: str = "",
+) -> Field:
+    """Return a field that may stay blank."""
+    return Field(label, kind, note, target, False, default, blank_means, choices, names_of)
+
+
 @dataclass(frozen=True, slots=True)
 class Form:
     """Label | value | note, one field a row."""

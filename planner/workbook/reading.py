@@ -42,7 +42,8 @@ from planner.household import (
 from planner.workbook.addresses import replaced
 from planner.workbook.data import Entry, Row, TableData, WorkbookData
 from planner.workbook.fields import Field, Form, Kind, Table, normalised
-from planner.workbook.layout import IGNORED_COLUMNS, IN_THE_PLAN, SHEETS
+from planner.workbook.layout import IGNORED_COLUMNS, SHEETS
+from planner.workbook.layout_client import IN_THE_PLAN
 from planner.workbook.parsing import CellProblem, parse
 from planner.workbook.scanning import scan
 
