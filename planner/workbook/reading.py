@@ -205,6 +205,7 @@ class _Builder:
         self.data = data
         self.found: list[Diagnostic] = list(data.problems)
         self.cells: dict[str, str] = {}
+        self.labels: dict[str, str] = {}
         self.unread: set[str] = set()  # household paths whose cells could not be read
         self.values: dict[str, dict[str, Any]] = {}  # form values by the path's first part
 
@@ -216,7 +217,7 @@ class _Builder:
     def value(self, field: Field, entry: Entry | None, path: str) -> Any:  # noqa: ANN401 - as the field's kind
         """Return the parsed value; None for an allowed blank; a stand-in where unreadable."""
         if entry is not None:
-            self.cells[path] = entry.cell
+            self.cells[path], self.labels[path] = entry.cell, field.label
         if entry is None or entry.is_blank:
             if not field.required:
                 return None
@@ -359,10 +360,16 @@ class _Builder:
             complaints, household = error.diagnostics, None
         for complaint in complaints:
             if not self._follows_from_unread(complaint):
-                self.found.append(replace(complaint, where=self.cell(complaint.where)))
+                self.found.append(self.located(complaint))
         if household is None or any(problem.severity == "error" for problem in self.found):
             raise InputError(sorted(self.found, key=lambda problem: problem.severity))
         return household, tuple(self.found)
+
+    def located(self, complaint: Diagnostic) -> Diagnostic:
+        """Return a complaint about a household field as one about its cell, with the cell's label."""
+        label = self.labels.get(complaint.where)
+        message = f"{label}: {complaint.message}" if label else complaint.message
+        return replace(complaint, where=self.cell(complaint.where), message=message)
 
     def cell(self, path: str) -> str:
         """Return the cell of a household path, or of the nearest part of it that has one."""

@@ -56,7 +56,7 @@ _WIDTHS: Final[dict[Kind, float]] = {
     Kind.DATE: 13,
     Kind.RISE: 18,
     Kind.CONTINUATION: 18,
-    Kind.CHOICE: 17,
+    Kind.CHOICE: 22,
     Kind.AS_TYPED: 18,
 }
 _LABEL_WIDTH: Final = 38
@@ -242,7 +242,9 @@ class _SheetWriter:
                     sheet.row_dimensions[row].height = 15 * (1 + len(str(value)) // _LONG_TEXT)
             note = sheet.cell(row, 3, _full_note(field))
             note.font = NOTE_FONT
-            note.alignment = Alignment(vertical="top", wrap_text=not self.has_tables, indent=1)
+            note.alignment = Alignment(
+                vertical="top", wrap_text=not self.has_tables, horizontal="left", indent=1
+            )
             row += 1
         return row
 
@@ -270,6 +272,8 @@ class _SheetWriter:
             cell.alignment = Alignment(wrap_text=True, vertical="center")
             if field is table.per_class:
                 cell.fill, cell.font = REQUIRED_HEAD, WHITE_BOLD
+                if header is None:  # to be filled in with an asset class's name
+                    cell.fill, cell.border, cell.font = REQUIRED_FILL, REQUIRED_BORDER, font(bold=True)
             self._widen(column + offset, _WIDTHS.get(field.kind, 14))
         words = max(len(field.label) / _WIDTHS.get(field.kind, 14) for field in fields)
         sheet.row_dimensions[head].height = 16 * max(2, math.ceil(1.2 * words))
