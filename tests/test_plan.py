@@ -11,6 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
+from planner import plan as plan_module
 from planner.banded import KeepWithinBand
 from planner.diagnostics import Diagnostic, InputError
 from planner.household import Account, AccountType, Household, OwnTaxRules, Person, Preferences
@@ -262,6 +263,18 @@ def test_what_ifs_are_solved_anew():
     assert results["savings fall by a fifth at the start"].spending_this_year < base
 
 
+def test_a_what_if_that_changes_nothing_gives_the_plan_s_own_figures(monkeypatch):
+    """Errors of coarser grids and fewer futures drop out."""
+    monkeypatch.setattr(plan_module, "stresses", lambda household: [("as it is", replace(household))])
+    plan = make_plan(
+        read(single()), replace(QUICK, what_ifs=True, what_if_solver=SolverSettings(6, 6, 6, 24))
+    )
+    result, optimum = plan.what_ifs[0], plan.strategies[0]
+    for field in ("spending_this_year", "level_spending", "chance_below_essential"):
+        # floating point only: a + b - b
+        assert_allclose(getattr(result, field), getattr(optimum, field), rtol=1e-12)
+
+
 def test_stresses_apply_where_there_is_ground():
     household = couple()
     assert [name for name, _ in stresses(household)] == [name for name, _ in STRESSES][
@@ -353,7 +366,10 @@ def test_a_problem_in_a_what_if_says_which(monkeypatch):
     def refuse(*arguments):
         raise InputError([Diagnostic("some-code", "spending", "it cannot be planned for")])
 
-    monkeypatch.setattr("planner.plan._what_if_result", refuse)
+    solve = plan_module._optimum_alone
+    monkeypatch.setattr(
+        plan_module, "_optimum_alone", lambda h, s: solve(h, s) if h == single() else refuse()
+    )
     with pytest.raises(InputError) as error:
         make_plan(read(single()), replace(QUICK, what_ifs=True))
     assert error.value.diagnostics[0].code == "some-code"
