@@ -20,6 +20,9 @@ from planner.simulation import Paths, Scenarios, draw_scenarios, simulate
 ENOUGH_PATHS = 200
 """Fewer living paths than this make a poor percentile; see `late_years`."""
 
+LATE_PATHS = 500
+"""Paths drawn for the years that few lives reach; all of them live to the end."""
+
 LOOKUP_MULTIPLES = (0.5, 0.6, 0.7, 0.8, 0.9, 1.0, 1.1, 1.2, 1.3, 1.4, 1.5)
 """Next year's savings in the look-up, as multiples of the middle case."""
 
@@ -79,7 +82,7 @@ def late_years(problem: Problem, policy: Policy, paths: Paths, seed: int) -> Pat
     if (paths.alive.sum(axis=0) >= ENOUGH_PATHS).all():
         return None
     long_lived = given_a_long_life(problem)
-    scenarios = draw_scenarios(long_lived, 2000, np.random.default_rng([seed, 1]))
+    scenarios = draw_scenarios(long_lived, LATE_PATHS, np.random.default_rng([seed, 1]))
     return simulate(problem, policy, scenarios)
 
 
