@@ -84,6 +84,11 @@ class SpendingUtility:
         z = np.asarray(x, dtype=np.float64) / self.essential
         return np.asarray(z ** (-self.risk_aversion) / self.essential)
 
+    def power_marginal_inverse(self, m: ArrayLike) -> FloatArray:
+        """Money x > 0 with U'(x) = m, for m > 0 per unit of money (without line or kink)."""
+        z = (np.asarray(m, dtype=np.float64) * self.essential) ** (-1 / self.risk_aversion)
+        return np.asarray(self.essential * z)
+
     # f -------------------------------------------------------------------------------------------
     def value(self, x: ArrayLike) -> FloatArray:
         """f(x), any real x; any shape."""

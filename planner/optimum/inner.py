@@ -58,7 +58,7 @@ class Felicity:
     ceiling: float
 
     def value(self, c: FloatArray) -> FloatArray:
-        """n f(c/n)."""
+        """Utility n f(c/n) of spending c."""
         return self.need * self.utility.value(c / self.need)
 
     def marginal(self, c: FloatArray) -> FloatArray:

@@ -15,10 +15,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from planner.optimum.grids import LogGrid
-from planner.optimum.inner import CashTable
+from planner.optimum.surface import Surface, hermite_basis, hermite_rows
 from planner.piecewise import FloatArray, PiecewiseLinear
-from planner.problem import IntArray
+from planner.problem import IntArray, Problem
 
 ROOT_STEPS = 4  # false-position steps on the first-order condition between two candidates
 
@@ -32,11 +31,14 @@ class OuterChoice:
     level : certainty equivalent of the value.
     gross : g = w2 + k.
     cash_slope : slope of the level along cash.
+    exchange : r, what money left in tax-deferred is worth in cash after tax; 1 - T'(g) where g is
+        between kinks, between the two sides' values where it sits at one, beyond them at a bound.
     """
 
     level: FloatArray
     gross: FloatArray
     cash_slope: FloatArray
+    exchange: FloatArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -58,128 +60,71 @@ class Situation:
     conversions: bool
 
 
-class Surface:
-    """Hermite interpolation of a cash table in money, tax-deferred and (for conversions) tax-free.
-
-    Once continuously differentiable, so the first-order condition has a root to find.
-    """
-
-    def __init__(
-        self, table: CashTable, deferred: LogGrid, free: LogGrid, slopes2: FloatArray, slopes3: FloatArray
-    ) -> None:
-        self.table = table
-        self.deferred = deferred
-        self.free = free
-        n2, n_cash, n3 = table.level.shape
-        self.shape = (n2, n_cash, n3)
-
-        def along2(values: FloatArray) -> FloatArray:
-            return (slopes2 @ values.reshape(n2, -1)).reshape(self.shape)
-
-        def along3(values: FloatArray) -> FloatArray:
-            return values @ slopes3.T
-
-        level, slope = table.level, table.slope
-        parts = [level, slope, along2(level), along2(slope)]
-        self.packed = np.stack(parts, axis=-1).reshape(-1, 4)
-        self.packed3 = np.stack([along3(p) for p in parts], axis=-1).reshape(-1, 4) if n3 > 1 else None
-
-    def __call__(
-        self, cash: FloatArray, deferred: FloatArray, node3: IntArray, free: FloatArray | None
-    ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-        """Level and its slopes along cash, tax-deferred and tax-free at scattered points (n,).
-
-        `free` None: at tax-free node `node3` (the slope along tax-free is then 0, unused).
-        """
-        grid = self.table.grid
-        n2, n_cash, n3 = self.shape
-        m = grid.cell(cash)
-        basis_m = _basis(cash, grid.nodes[m], grid.nodes[m + 1])
-        if n2 > 1:
-            j = self.deferred.cell(deferred)
-            basis_2 = _basis(deferred, self.deferred.nodes[j], self.deferred.nodes[j + 1])
-            rows = (0, 1)
-        else:
-            j = np.zeros(cash.size, dtype=np.int64)
-            one, zero = np.ones(cash.size), np.zeros(cash.size)
-            basis_2 = ((one, zero), (zero, zero)), ((zero, zero), (zero, zero))
-            rows = (0,)
-        if free is None or n3 == 1:
-            return self._sum(self.packed, (j * n_cash + m) * n3 + node3, rows, basis_m, basis_2)
-        i3 = self.free.cell(free)
-        basis_3 = _basis(free, self.free.nodes[i3], self.free.nodes[i3 + 1])
-        base = (j * n_cash + m) * n3 + i3
-        total = [np.zeros(cash.size) for _ in range(4)]
-        for side in (0, 1):
-            plain = self._sum(self.packed, base + side, rows, basis_m, basis_2)
-            sloped = self._sum(self.packed3, base + side, rows, basis_m, basis_2)
-            (h, g), (dh, dg) = basis_3[side]
-            for q in range(3):
-                total[q] += h * plain[q] + g * sloped[q]
-            total[3] += dh * plain[0] + dg * sloped[0]
-        return total[0], total[1], total[2], total[3]
-
-    def _sum(self, packed, base, rows, basis_m, basis_2):  # noqa: ANN001, ANN202
-        _, n_cash, n3 = self.shape
-        value = along_m = along_2 = 0.0
-        for row in rows:
-            (h2, g2), (dh2, dg2) = basis_2[row]
-            for side in (0, 1):
-                corner = packed[base + (row * n_cash + side) * n3]
-                (hm, gm), (dhm, dgm) = basis_m[side]
-                v, vm, v2, vm2 = corner[:, 0], corner[:, 1], corner[:, 2], corner[:, 3]
-                flat = hm * v + gm * vm
-                cross = hm * v2 + gm * vm2
-                value = value + h2 * flat + g2 * cross
-                along_2 = along_2 + dh2 * flat + dg2 * cross
-                along_m = along_m + h2 * (dhm * v + dgm * vm) + g2 * (dhm * v2 + dgm * vm2)
-        return value, along_m, along_2, np.zeros_like(value)
+def situation_of(problem: Problem, t: int, h: int) -> Situation:
+    """Return the situation of a problem's year and status."""
+    return Situation(
+        float(problem.income[t, h]),
+        problem.tax[t][h],
+        float(problem.minimum_share[t, h]),
+        float(problem.accessible_share[t, h]),
+        problem.conversions,
+    )
 
 
-def _basis(x: FloatArray, left: FloatArray, right: FloatArray):  # noqa: ANN202
-    """Hermite weights: per side ((value, slope), (their derivatives)); straight beyond `right`."""
-    width = right - left
-    t = np.minimum((x - left) / width, 1.0)
-    beyond = np.maximum(x - right, 0.0)
-    u = 1.0 - t
-    h0 = u * u * (1.0 + 2.0 * t)
-    g0 = width * t * u * u
-    g1 = -width * t * t * u + beyond
-    dh0 = -6.0 * t * u / width
-    dg0 = u * (1.0 - 3.0 * t)
-    dg1 = -t * (2.0 - 3.0 * t)
-    return ((h0, g0), (dh0, dg0)), ((1.0 - h0, g1), (-dh0, dg1))
+# Money, tax-deferred left, tax-free node, tax-free (None on its node), slopes of money and tax-free in g.
+Place = tuple[FloatArray, FloatArray, IntArray, FloatArray | None, FloatArray, float]
 
 
 class Outer:
-    """Objective of the outer choice for one year and status, on all nodes at once."""
+    """Objective of the outer choice for one year and status, at given opening balances.
 
-    def __init__(self, surface: Surface, taxable: LogGrid, situation: Situation) -> None:
+    Attributes
+    ----------
+    x1, x2, x3 : ndarray of shape (n,)
+        Opening balances.
+    node3 : ndarray of int, shape (n,), or None
+        Tax-free node that holds x3; None where balances lie anywhere.
+    """
+
+    def __init__(
+        self,
+        surface: Surface,
+        situation: Situation,
+        balances: tuple[FloatArray, FloatArray, FloatArray],
+        node3: IntArray | None = None,
+    ) -> None:
         self.surface = surface
         self.situation = situation
-        self.nodes1, self.nodes2, self.nodes3 = taxable.nodes, surface.deferred.nodes, surface.free.nodes
-        self.shape = (self.nodes1.size, self.nodes2.size, self.nodes3.size)
+        self.x1, self.x2, self.x3 = balances
+        self.node3 = np.zeros(self.x1.size, dtype=np.int64) if node3 is None else node3
+        self.on_nodes = node3 is not None
+        self.nodes2 = surface.deferred.nodes
+        self.low = situation.minimum_share * self.x2
+        self.high = situation.accessible_share * self.x2
         # Slope of T just below and just above a point: at a jump both neighbours count, not the jump.
         self.tax_slopes = situation.tax.slopes
 
-    def place(self, point: IntArray, g: FloatArray, slope_of_tax: FloatArray | float = 0.0):  # noqa: ANN201
-        """Cash, tax-deferred left and tax-free after taking out g, with their slopes in g."""
-        i, a, l3 = np.unravel_index(point, self.shape)
+    def place(self, point: IntArray, g: FloatArray, slope_of_tax: FloatArray) -> Place:
+        """Money, tax-deferred left and tax-free after taking out g, with their slopes in g."""
         s = self.situation
-        x2 = self.nodes2[a]
+        x2, x3 = self.x2[point], self.x3[point]
         tax = s.tax(g)
+        left = np.maximum(x2 - g, 0.0)
         if not s.conversions:
-            cash = self.nodes1[i] + s.income + g - tax
-            return cash, np.maximum(x2 - g, 0.0), l3, None, 1.0 - slope_of_tax, 0.0
-        pool = self.nodes1[i] + self.nodes3[l3] + s.income + g - tax
-        free = self.nodes3[l3] + g - s.minimum_share * x2
-        return pool, np.maximum(x2 - g, 0.0), l3, free, 1.0 - slope_of_tax, 1.0
+            cash = self.x1[point] + s.income + g - tax
+            return cash, left, self.node3[point], None if self.on_nodes else x3, 1.0 - slope_of_tax, 0.0
+        pool = self.x1[point] + x3 + s.income + g - tax
+        free = x3 + g - s.minimum_share * x2
+        return pool, left, self.node3[point], free, 1.0 - slope_of_tax, 1.0
 
-    def evaluate(self, point: IntArray, g: FloatArray, slope_of_tax: FloatArray):  # noqa: ANN201
-        """Level, its total slope in g, and its slope along cash."""
+    def evaluate(
+        self, point: IntArray, g: FloatArray, slope_of_tax: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+        """Level, its total slope in g, its slope along cash, and the exchange rate r."""
         cash, deferred, l3, free, cash_slope, free_slope = self.place(point, g, slope_of_tax)
         level, along_m, along_2, along_3 = self.surface(cash, deferred, l3, free)
-        return level, cash_slope * along_m + free_slope * along_3 - along_2, along_m
+        kept = along_2 - free_slope * along_3
+        return level, cash_slope * along_m - kept, along_m, kept / np.maximum(along_m, 1e-300)
 
     def side_slopes(self, g: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Slope of T just below and just above g."""
@@ -188,83 +133,75 @@ class Outer:
         above = np.clip(np.searchsorted(x, g, side="right") - 1, 0, x.size - 1)
         return self.tax_slopes[below], self.tax_slopes[above]
 
-    def best_nodes(self) -> tuple[FloatArray, FloatArray]:
-        """Best level over the tax-deferred nodes that are feasible, and its g; -inf where none is."""
-        n1, n2, n3 = self.shape
-        s = self.situation
-        x2, y2 = self.nodes2[:, None], self.nodes2[None, :]
-        slack = 1e-9 * x2
-        feasible = (y2 <= (1 - s.minimum_share) * x2 + slack) & (y2 >= (1 - s.accessible_share) * x2 - slack)
-        a, j = np.nonzero(feasible)
-        g = self.nodes2[a] - self.nodes2[j]
-        if s.conversions:
-            level = self._node_levels_converting(a, j, g)
-        else:
-            cash = self.nodes1[:, None] + (s.income + g - s.tax(g))[None, :]
-            level = self._rows(cash, np.broadcast_to(j, cash.shape))
-        full = np.full((n1, n2, n2, n3), -np.inf)
-        full[:, a, j, :] = level
-        best = full.argmax(axis=2)
-        top = np.take_along_axis(full, best[:, :, None, :], axis=2)[:, :, 0, :]
-        return top, self.nodes2[None, :, None] - self.nodes2[best]
+    def search(
+        self, level: FloatArray, gross: FloatArray, around: tuple[FloatArray, FloatArray] | None = None
+    ) -> OuterChoice:
+        """Best g from a start: bounds, then kinks and nodes near it, then the first-order condition.
 
-    def _rows(self, cash: FloatArray, j: IntArray) -> FloatArray:
-        """Levels at (cash, node j) for every tax-free node at once: (...) -> (..., n3)."""
-        table = self.surface.table
-        n_cash, n3 = table.level.shape[1:]
-        m = table.grid.cell(cash)
-        row = j * n_cash + m
-        level, slope = table.level.reshape(-1, n3), table.slope.reshape(-1, n3)
-        ((h0, g0), _), ((h1, g1), _) = _basis(cash, table.grid.nodes[m], table.grid.nodes[m + 1])
-        return (
-            h0[..., None] * level[row]
-            + g0[..., None] * slope[row]
-            + h1[..., None] * level[row + 1]
-            + g1[..., None] * slope[row + 1]
-        )
-
-    def _node_levels_converting(self, a: IntArray, j: IntArray, g: FloatArray) -> FloatArray:
-        n1, _, n3 = self.shape
-        shape = (n1, a.size, n3)
-        point = np.ravel_multi_index(
-            np.broadcast_arrays(np.arange(n1)[:, None, None], a[None, :, None], np.arange(n3)[None, None, :]),
-            self.shape,
-        ).ravel()
-        amount = np.broadcast_to(g[None, :, None], shape).ravel()
-        return self.evaluate(point, amount, np.zeros(amount.size))[0].reshape(shape)
-
-    def solve(self) -> OuterChoice:
-        """Best g at every node."""
-        s = self.situation
+        Parameters
+        ----------
+        level, gross : ndarray of shape (n,)
+            Start and its level; both are overwritten.
+        around : two ndarrays of shape (n,)
+            Range of g in which kinks of tax (and, off the nodes, tax-deferred nodes) are tried;
+            None = up to the tax-deferred nodes on either side.
+        """
+        everywhere = np.arange(level.size)
         if self.nodes2.size == 1:
-            point = np.arange(int(np.prod(self.shape)))
-            level, _, along = self.evaluate(point, np.zeros(point.size), np.zeros(point.size))
-            return OuterChoice(level.reshape(self.shape), np.zeros(self.shape), along.reshape(self.shape))
-        level, gross = self.best_nodes()
-        level, gross = level.ravel(), gross.ravel()
-        point = np.arange(level.size)
-        x2 = self.nodes2[np.unravel_index(point, self.shape)[1]]
-        low, high = s.minimum_share * x2, s.accessible_share * x2
-        gross = np.clip(gross, low, high)
-        bounds = [low] if s.minimum_share > 0 else []
-        if s.accessible_share < 1:
-            bounds.append(high)
-        for bound in bounds:
-            self._improve(level, gross, point, bound)
-        self._try_kinks(level, gross, low, high, x2)
-        along = np.empty(level.size)
-        self._first_order(level, gross, along, low, high, x2)
-        return OuterChoice(level.reshape(self.shape), gross.reshape(self.shape), along.reshape(self.shape))
+            level, _, along, exchange = self.evaluate(everywhere, gross, np.zeros(level.size))
+            return OuterChoice(level, gross, along, np.ones(level.size))
+        if self.situation.minimum_share > 0 or not self.on_nodes:
+            self._try(level, gross, everywhere, self.low)
+        if self.situation.accessible_share < 1 or not self.on_nodes:
+            self._try(level, gross, everywhere, self.high)
+        lower, upper = self.neighbours(everywhere, gross) if around is None else around
+        self._try_between(level, gross, np.unique(self.situation.tax.x), lower, upper)
+        if not self.on_nodes:
+            nodes = -self.nodes2[::-1]
+            self._try_between(level, gross, nodes, lower - self.x2, upper - self.x2, self.x2)
+        along, exchange = np.empty(level.size), np.empty(level.size)
+        self._first_order(level, gross, along, exchange)
+        below, above = self.side_slopes(gross)
+        least = np.where(gross >= self.high, -np.inf, 1.0 - np.maximum(above, below))
+        most = np.where(gross <= self.low, np.inf, 1.0 - np.minimum(above, below))
+        return OuterChoice(level, gross, along, np.clip(exchange, least, most))
 
-    def _improve(self, level: FloatArray, gross: FloatArray, point: IntArray, g: FloatArray) -> None:
+    def _try(self, level: FloatArray, gross: FloatArray, point: IntArray, g: FloatArray) -> None:
         value = self.evaluate(point, g, np.zeros(g.size))[0]
         np.copyto(gross, g, where=value > level)
         np.maximum(level, value, out=level)
 
-    def _neighbours(
-        self, g: FloatArray, low: FloatArray, high: FloatArray, x2: FloatArray
-    ) -> tuple[FloatArray, FloatArray]:
-        """g of the tax-deferred nodes on either side, within [low, high]."""
+    def _try_between(
+        self,
+        level: FloatArray,
+        gross: FloatArray,
+        places: FloatArray,
+        lower: FloatArray,
+        upper: FloatArray,
+        shift: FloatArray | None = None,
+    ) -> None:
+        """Try g = place (+ shift of the point) for every place strictly between lower and upper."""
+        start = np.searchsorted(places, lower, side="right")
+        stop = np.searchsorted(places, upper, side="left")
+        count = np.maximum(stop - start, 0)
+        point = np.repeat(np.arange(level.size), count)
+        if not point.size:
+            return
+        offset = np.arange(point.size) - np.repeat(np.cumsum(count) - count, count)
+        g = places[start[point] + offset]
+        if shift is not None:
+            g = g + shift[point]
+        g = np.clip(g, self.low[point], self.high[point])
+        value = self.evaluate(point, g, np.zeros(g.size))[0]
+        best = level.copy()
+        np.maximum.at(best, point, value)
+        wins = (value > level[point]) & (value == best[point])
+        gross[point[wins]] = g[wins]
+        level[:] = best
+
+    def neighbours(self, point: IntArray, g: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Withdrawals g that leave the tax-deferred nodes on either side, within the bounds."""
+        x2, low, high = self.x2[point], self.low[point], self.high[point]
         y2 = x2 - g
         tolerance = 1e-9 * (x2 + 1.0)
         above = np.searchsorted(self.nodes2, y2 + tolerance, side="right")
@@ -275,71 +212,47 @@ class Outer:
         upper = np.where(below >= 0, x2 - self.nodes2[np.maximum(below, 0)], high)
         return np.maximum(lower, low), np.minimum(upper, high)
 
-    def _try_kinks(
-        self, level: FloatArray, gross: FloatArray, low: FloatArray, high: FloatArray, x2: FloatArray
-    ) -> None:
-        kinks = np.unique(self.situation.tax.x)
-        lower, upper = self._neighbours(gross, low, high, x2)
-        start = np.searchsorted(kinks, lower, side="right")
-        stop = np.searchsorted(kinks, upper, side="left")
-        count = np.maximum(stop - start, 0)
-        point = np.repeat(np.arange(level.size), count)
-        if not point.size:
-            return
-        offset = np.arange(point.size) - np.repeat(np.cumsum(count) - count, count)
-        g = kinks[start[point] + offset]
-        value = self.evaluate(point, g, np.zeros(g.size))[0]
-        best = level.copy()
-        np.maximum.at(best, point, value)
-        wins = (value > level[point]) & (value == best[point])
-        gross[point[wins]] = g[wins]
-        level[:] = best
-
     def _first_order(
         self,
         level: FloatArray,
         gross: FloatArray,
         along: FloatArray,
-        low: FloatArray,
-        high: FloatArray,
-        x2: FloatArray,
+        exchange: FloatArray,
     ) -> None:
         """Move to the root of the first-order condition next to the best candidate, where there is one."""
         point = np.arange(level.size)
         rate_below, rate_above = self.side_slopes(gross)
-        cash, deferred, l3, free, cash_below, free_below = self.place(point, gross, rate_below)
-        cash_above, free_above = self.place(point, gross, rate_above)[4:]
-        _, along_m, along_2, along_3 = self.surface(cash, deferred, l3, free)
-        along[:] = along_m
-        slope_up = cash_above * along_m + free_above * along_3 - along_2
-        slope_down = cash_below * along_m + free_below * along_3 - along_2
-        up = (slope_up > 0) & (gross < high)
-        down = ~up & (slope_down < 0) & (gross > low)
+        _, slope_down, along[:], exchange[:] = self.evaluate(point, gross, rate_below)
+        slope_up = slope_down + (rate_below - rate_above) * along
+        up = (slope_up > 0) & (gross < self.high)
+        down = ~up & (slope_down < 0) & (gross > self.low)
         move = np.nonzero(up | down)[0]
         if not move.size:
             return
         upward = up[move]
         near = gross[move]
         near_slope = np.where(upward, slope_up[move], slope_down[move])
-        lower, upper = self._neighbours(near, low[move], high[move], x2[move])
+        lower, upper = self.neighbours(move, near)
         kinks = np.append(self.situation.tax.x, np.inf)
         next_kink = kinks[np.searchsorted(kinks[:-1], near, side="right")]
         last_kink = kinks[np.maximum(np.searchsorted(kinks[:-1], near, side="left") - 1, 0)]
         last_kink = np.where(last_kink < near, last_kink, -np.inf)
         far = np.where(upward, np.minimum(upper, next_kink), np.maximum(lower, last_kink))
         rate = np.where(upward, rate_above[move], rate_below[move])
-        best_level, best_gross, best_along = level[move], near.copy(), along[move]
-        _, far_slope, _ = self.evaluate(move, far, rate)
+        best_level, best_gross = level[move], near.copy()
+        best_along, best_exchange = along[move], exchange[move]
+        far_slope = self.evaluate(move, far, rate)[1]
         moved_last = np.zeros(near.size, dtype=bool)
         for step in range(ROOT_STEPS):
             crossing = near_slope * far_slope < 0
             share = np.divide(near_slope, near_slope - far_slope, out=np.full(near.size, 0.5), where=crossing)
             trial = near + np.clip(share, 0.02, 0.98) * (far - near)
-            value, slope, trial_along = self.evaluate(move, trial, rate)
+            value, slope, trial_along, trial_exchange = self.evaluate(move, trial, rate)
             better = value > best_level
             best_level = np.where(better, value, best_level)
             best_gross = np.where(better, trial, best_gross)
             best_along = np.where(better, trial_along, best_along)
+            best_exchange = np.where(better, trial_exchange, best_exchange)
             same = slope * near_slope > 0
             # Illinois: an end that stays twice in a row has its slope halved, so that both close in.
             stays = 1.0 - 0.5 * ((same == moved_last) & (step > 0))
@@ -349,4 +262,72 @@ class Outer:
                 np.where(same, far_slope * stays, slope),
             )
             moved_last = same
-        level[move], gross[move], along[move] = best_level, best_gross, best_along
+        level[move], gross[move], along[move], exchange[move] = (
+            best_level,
+            best_gross,
+            best_along,
+            best_exchange,
+        )
+
+
+def best_on_nodes(surface: Surface, taxable: FloatArray, situation: Situation) -> OuterChoice:
+    """Best outer choice at every node of (taxable, tax-deferred, tax-free), arrays (n1, n2, n3)."""
+    nodes2, nodes3 = surface.deferred.nodes, surface.free.nodes
+    shape = (taxable.size, nodes2.size, nodes3.size)
+    i, a, l3 = (index.ravel() for index in np.indices(shape))
+    outer = Outer(surface, situation, (taxable[i], nodes2[a], nodes3[l3]), l3)
+    if nodes2.size == 1:
+        level, gross = np.zeros(i.size), np.zeros(i.size)
+    else:
+        on_nodes, gross_on_nodes = _node_levels(surface, taxable, situation)
+        level, gross = on_nodes.ravel(), np.clip(gross_on_nodes.ravel(), outer.low, outer.high)
+    choice = outer.search(level, gross)
+    return OuterChoice(
+        choice.level.reshape(shape),
+        choice.gross.reshape(shape),
+        choice.cash_slope.reshape(shape),
+        choice.exchange.reshape(shape),
+    )
+
+
+def _node_levels(
+    surface: Surface, taxable: FloatArray, situation: Situation
+) -> tuple[FloatArray, FloatArray]:
+    """Best level over the tax-deferred nodes left that are feasible, and its g; -inf where none is.
+
+    Tax-deferred left lies on its nodes, so levels need interpolation in money alone; with
+    conversions tax-free is off its nodes by an amount that depends on (a, j) only, a small matrix.
+    """
+    s = situation
+    nodes2, nodes3 = surface.deferred.nodes, surface.free.nodes
+    n1, n2, n3 = taxable.size, nodes2.size, nodes3.size
+    x2, y2 = nodes2[:, None], nodes2[None, :]
+    slack = 1e-9 * x2
+    feasible = (y2 <= (1 - s.minimum_share) * x2 + slack) & (y2 >= (1 - s.accessible_share) * x2 - slack)
+    a, j = np.nonzero(feasible)
+    g = nodes2[a] - nodes2[j]
+    table, grid = surface.table, surface.table.grid
+    n_cash = grid.nodes.size
+    if s.conversions:
+        free = nodes3[None, :] + (g - s.minimum_share * nodes2[a])[:, None]
+        rows = hermite_rows(surface.free, surface.slopes3, free)  # (pairs, n3, n3)
+        level = (table.level[j] @ rows.transpose(0, 2, 1)).reshape(-1, n3)
+        slope = (table.slope[j] @ rows.transpose(0, 2, 1)).reshape(-1, n3)
+        money = taxable[:, None, None] + (s.income + g - s.tax(g))[None, :, None] + nodes3
+        first = np.arange(a.size)[None, :, None] * n_cash
+    else:
+        level, slope = table.level.reshape(-1, n3), table.slope.reshape(-1, n3)
+        money = (taxable[:, None] + (s.income + g - s.tax(g))[None, :])[:, :, None]
+        first = j[None, :, None] * n_cash
+    cell = grid.cell(money)
+    ((h0, g0), _), ((h1, g1), _) = hermite_basis(money, grid.nodes[cell], grid.nodes[cell + 1])
+    row = first + cell
+    # Without conversions money is the same for all tax-free nodes: whole rows are read at once.
+    at: tuple[object, ...] = (row, np.arange(n3)) if s.conversions else (row[..., 0],)
+    after: tuple[object, ...] = (row + 1, np.arange(n3)) if s.conversions else (row[..., 0] + 1,)
+    value = h0 * level[at] + g0 * slope[at] + h1 * level[after] + g1 * slope[after]  # type: ignore[index]
+    full = np.full((n1, n2, n2, n3), -np.inf)
+    full[:, a, j, :] = value
+    best = full.argmax(axis=2)
+    top = np.take_along_axis(full, best[:, :, None, :], axis=2)[:, :, 0, :]
+    return top, nodes2[None, :, None] - nodes2[best]

@@ -7,6 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from planner.optimum.grids import LogGrid, lagrange_matrix
+from planner.optimum.inner import TINY_SLOPE, Felicity
+from planner.optimum.outer import Outer, situation_of
+from planner.optimum.surface import Surface
 from planner.piecewise import FloatArray
 from planner.preferences import SpendingUtility
 from planner.problem import TAX_DEFERRED, TAX_FREE, Decision, IntArray, Problem, State
@@ -22,12 +25,13 @@ class OptimalPolicy:
         Nodes of taxable, tax-deferred, tax-free.
     level : ndarray of shape (n_years, n_statuses, n1, n2, n3)
         C = g^-1(V / A) at opening balances, money a year.
+    willing : same shape
+        U'^-1 of the marginal value of cash on hand, money a year per unit of need: spending, were
+        it not for the kink at essential spending, the floor's line and the ceiling.
     gross : same shape
         g = w2 + k, money taken out of tax-deferred.
-    spending : same shape
-        c, money a year after tax.
-    cash_price : same shape
-        Marginal value of cash on hand, V's slope along cash, utility per unit of money.
+    surfaces : n_years tuples of n_statuses Surface
+        The year's value once g is fixed, for choices at balances between the nodes.
     portfolio : ndarray of int, same shape
         Best portfolio at *closing* balances y (after the year's choices) on the same nodes.
     weights : ndarray of shape (n_years, n_statuses)
@@ -38,9 +42,9 @@ class OptimalPolicy:
 
     grids: tuple[LogGrid, LogGrid, LogGrid]
     level: FloatArray
+    willing: FloatArray
     gross: FloatArray
-    spending: FloatArray
-    cash_price: FloatArray
+    surfaces: tuple[tuple[Surface, ...], ...]
     portfolio: IntArray
     weights: FloatArray
     smooth: SpendingUtility
@@ -75,24 +79,41 @@ class OptimalPolicy:
         return float(self.utility.inverse(self.value(balances[None, :])[0] / self.weights[0, 0]))
 
     def decide(self, problem: Problem, t: int, state: State) -> Decision:
-        """Choices at any balances: linear between the nodes; see the module docstring."""
+        """Choices at any balances: the smooth quantities are linear between nodes."""
         n = state.status.size
-        gross, spending = np.empty(n), np.empty(n)
+        spending, withdraw, convert = np.empty(n), np.empty(n), np.zeros(n)
         portfolio = np.empty(n, dtype=np.int64)
-        withdraw, convert = np.empty(n), np.zeros(n)
         for h in range(problem.n_statuses):
             here = np.flatnonzero(state.status == h)
             if not here.size:
                 continue
             x = state.balances[here]
-            corner, weight = self._corners(x)
-            gross[here] = (self.gross[t, h].ravel()[corner] * weight).sum(axis=0)
-            spending[here] = (self.spending[t, h].ravel()[corner] * weight).sum(axis=0)
-            withdraw[here], convert[here], y = settle(problem, t, h, x, gross[here], spending[here])
+            read = self.read(problem, t, h, x)
+            spending[here] = read.spending
+            withdraw[here], convert[here], y = settle(problem, t, h, x, read.gross, read.spending)
             corner, weight = self._corners(y)
             choice = (self.portfolio[t, h].ravel()[corner] * weight).sum(axis=0)
             portfolio[here] = np.rint(choice).astype(np.int64)
         return Decision(withdraw, convert, spending, portfolio, np.zeros((n, 0)))
+
+    def read(self, problem: Problem, t: int, h: int, balances: FloatArray) -> Reading:
+        """Choices at balances (n, 3) in year t and status h: the year's choice solved anew there.
+
+        The continuation is the recursion's; only this year's g and c are chosen for the balances
+        given, starting from what the surrounding nodes chose.
+        """
+        corner, weight = self._corners(balances)
+        nodes = self.gross[t, h].ravel()[corner]
+        situation = situation_of(problem, t, h)
+        outer = Outer(self.surfaces[t][h], situation, (balances[:, 0], balances[:, 1], balances[:, 2]))
+        gross = np.clip((nodes * weight).sum(axis=0), outer.low, outer.high)
+        everywhere = np.arange(gross.size)
+        level = outer.evaluate(everywhere, gross, np.zeros(gross.size))[0]
+        choice = outer.search(level, gross, (nodes.min(axis=0), nodes.max(axis=0)))
+        slope = np.maximum(choice.cash_slope, TINY_SLOPE)
+        price = self.weights[t, h] * self.smooth.marginal(choice.level) * slope
+        felicity = Felicity(self.utility, self.smooth, float(problem.need[t, h]), problem.ceiling)
+        return Reading(felicity.spend(price), choice.gross, price, choice.exchange)
 
     def _corners(self, balances: FloatArray) -> tuple[IntArray, FloatArray]:
         """Flat node indices and weights of the enclosing cell: (8, n) or fewer for absent accounts."""
@@ -108,6 +129,16 @@ class OptimalPolicy:
             index = np.concatenate([index + k, index + k + 1])
             weight = np.concatenate([weight * (1 - share), weight * share])
         return index, weight
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Reading:
+    """Choices at given balances, each (n,): spending, g, price of cash (utility), exchange rate r."""
+
+    spending: FloatArray
+    gross: FloatArray
+    price: FloatArray
+    exchange: FloatArray
 
 
 def settle(

@@ -18,10 +18,12 @@ import numpy as np
 
 from planner.optimum.expectation import GrowthMaps, expected_value, growth_maps
 from planner.optimum.grids import CashGrid, LogGrid, derivative_matrix
-from planner.optimum.inner import Continuation, Felicity, cash_table
-from planner.optimum.outer import Outer, Situation, Surface
+from planner.optimum.inner import TINY_SLOPE, Continuation, Felicity, cash_table
+from planner.optimum.outer import best_on_nodes, situation_of
 from planner.optimum.policy import OptimalPolicy
+from planner.optimum.surface import Surface
 from planner.piecewise import FloatArray
+from planner.preferences import SpendingUtility
 from planner.problem import Problem
 
 
@@ -48,10 +50,10 @@ class SolverSettings:
         """The same with every grid `factor` times as fine."""
         return replace(
             self,
-            taxable=int(round(factor * (self.taxable - 1))) + 1,
-            tax_deferred=int(round(factor * (self.tax_deferred - 1))) + 1,
-            tax_free=int(round(factor * (self.tax_free - 1))) + 1,
-            cash=int(round(factor * self.cash)),
+            taxable=round(factor * (self.taxable - 1)) + 1,
+            tax_deferred=round(factor * (self.tax_deferred - 1)) + 1,
+            tax_free=round(factor * (self.tax_free - 1)) + 1,
+            cash=round(factor * self.cash),
         )
 
 
@@ -125,10 +127,10 @@ def solve(
     low, high = cash_range(problem, grids)
     slopes = [derivative_matrix(grid.nodes) for grid in grids]
     level = np.zeros((n_years, n_statuses, *shape))
+    willing = np.zeros_like(level)
     gross = np.zeros_like(level)
-    spending = np.zeros_like(level)
-    cash_price = np.zeros_like(level)
-    portfolio = np.zeros(level.shape, dtype=np.int16)
+    surfaces: list[list[Surface]] = [[] for _ in range(n_years)]
+    portfolio = np.zeros(level.shape, dtype=np.int64)
     maps: dict[tuple[float, ...], GrowthMaps] = {}
 
     for t in range(n_years - 1, -1, -1):
@@ -165,27 +167,20 @@ def solve(
                 problem.conversions,
             )
             surface = Surface(table, grids[1], grids[2], slopes[1], slopes[2])
-            situation = Situation(
-                float(problem.income[t, h]),
-                problem.tax[t][h],
-                float(problem.minimum_share[t, h]),
-                float(problem.accessible_share[t, h]),
-                problem.conversions,
-            )
-            choice = Outer(surface, grids[0], situation).solve()
+            choice = best_on_nodes(surface, grids[0].nodes, situation_of(problem, t, h))
             level[t, h] = choice.level
+            price = weights[t, h] * smooth.marginal(choice.level) * np.maximum(choice.cash_slope, TINY_SLOPE)
+            willing[t, h] = smooth.power_marginal_inverse(price)
             gross[t, h] = choice.gross
-            price = weights[t, h] * smooth.marginal(choice.level) * choice.cash_slope
-            cash_price[t, h] = price
-            spending[t, h] = felicity.spend(price)
+            surfaces[t].append(surface)
         if progress is not None:
             progress((n_years - t) / n_years)
     return OptimalPolicy(
         grids=grids,
         level=level,
+        willing=willing,
         gross=gross,
-        spending=spending,
-        cash_price=cash_price,
+        surfaces=tuple(tuple(row) for row in surfaces),
         portfolio=portfolio,
         weights=weights,
         smooth=smooth,
@@ -194,7 +189,7 @@ def solve(
 
 
 def _continuation(
-    later: FloatArray, weight: float, discount: float, smooth: object, slopes: list[FloatArray]
+    later: FloatArray, weight: float, discount: float, smooth: SpendingUtility, slopes: list[FloatArray]
 ) -> Continuation:
     """Level and slopes of J, in the inner choice's axis order (tax-deferred, taxable, tax-free)."""
     if weight == 0.0:
