@@ -156,18 +156,27 @@ class Builder:
                 continue
             survivor = people[0]
             continues = income.continues_to_partner
-            if continues == LARGER_OF_THE_TWO:
-                own = sum(
-                    self.income_amount(other, t)
-                    for other in self.household.incomes
-                    if self._index(other.owner) == survivor and other.kind is IncomeKind.STATE_PENSION
-                )
-                amount = max(0.0, amount - own)  # on top of the survivor's own
+            if isinstance(continues, str):  # the larger of the two
+                amount *= self._share_on_top(owner, survivor, t)
             else:
                 amount *= continues
             if amount > 0.0:
                 paid[survivor].append((income, amount))
         return paid
+
+    def _share_on_top(self, dead: int, survivor: int, t: int) -> float:
+        """Share of the dead partner's state pensions that lifts the survivor's own to the larger of the two.
+
+        All rows of each person count together, so a pension listed in two rows is one.
+        """
+        own = theirs = 0.0
+        for income in self.household.incomes:
+            if income.kind is IncomeKind.STATE_PENSION:
+                owner, amount = self._index(income.owner), self.income_amount(income, t)
+                own += amount if owner == survivor else 0.0
+                continues = income.continues_to_partner == LARGER_OF_THE_TWO
+                theirs += amount if owner == dead and continues else 0.0
+        return max(0.0, theirs - own) / theirs
 
     def contribution(self, t: int, status: str) -> FloatArray:
         """Paid into (taxable, tax-deferred, tax-free) in year t; taxable is 0 by definition."""
