@@ -388,18 +388,22 @@ def level_means(household: Household) -> float:
     calmest = min(household.portfolios, key=lambda p: risk(p.weights))
     mean = sum(w * c.expected_return for w, c in zip(calmest.weights, classes, strict=False))
     mean -= calmest.yearly_cost + household.adviser_fee
+    if not (mean > -1 and inflation > -1):
+        return math.nan
     discount = (1 + inflation) / (1 + mean)
     annuity = sum(discount**t for t in range(horizon))
     total = sum(account.balance for account in household.accounts)
     for income in household.incomes:
         age = ages.get(income.owner, 0)
         for t in range(horizon):
-            if income.from_age <= age + t + 1 and (income.to_age is None or age + t < income.to_age):
+            if income.from_age < age + t + 1 and (income.to_age is None or age + t < income.to_age):
                 rate = {"prices": inflation, "fixed": income.rise.rate}.get(
                     income.rise.kind, min(inflation, income.rise.rate)
                 )
                 total += income.amount * (discount * (1 + rate) / (1 + inflation)) ** t
     for one_off in household.one_offs:
+        if not math.isfinite(one_off.year + (one_off.last_year or 0)):
+            return math.nan
         if one_off.in_the_plan:
             first = one_off.year - household.plan_date.year
             last = (one_off.last_year or one_off.year) - household.plan_date.year

@@ -366,3 +366,22 @@ def test_hidden_lists_are_not_read(tmp_path):
     workbook = openpyxl.load_workbook(saved(tmp_path))
     assert workbook["Lists"].sheet_state == "hidden"
     assert "Guide" in workbook.sheetnames
+
+
+def test_what_stands_twice_is_refused(tmp_path):
+    def edit(workbook):
+        workbook["Household"]["A12"], workbook["Household"]["B12"] = "currency", "EUR"
+        workbook["Accounts"]["L6"] = "balance"
+        workbook.create_sheet("Last  Year")
+
+    assert set(found(saved(tmp_path, edit=edit))) == {
+        ("label-twice", "Household!B12"),
+        ("column-twice", "Accounts!L6"),
+        ("sheet-twice", "Last  Year"),
+    }
+
+
+def test_an_unreadable_year_does_not_break_the_yardstick_of_means(tmp_path):
+    """It once ended in an arithmetic error instead of a message."""
+    values = minimal() | {"One-offs": {"one-offs": [{"Item": "x", "Year": "#REF!", "Amount": 1}]}}
+    assert found(saved(tmp_path, values)) == [("cell-error", "One-offs!B7")]
