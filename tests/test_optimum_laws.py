@@ -53,6 +53,11 @@ HOUSEHOLDS = {
     "couple with everything": everything,
     "conversions": lambda: single_problem(6, conversions=True),
     "a jump in tax": lambda: single_problem(8, tax=((jump_tax(),),) * 8),
+    "access later": lambda: single_problem(
+        6,
+        accessible_share=np.where(np.arange(6) < 3, 0.1, 1.0)[:, None],
+        opening=np.array([30_000.0, 200_000.0, 10_000.0]),
+    ),
     "one portfolio": lambda: one_portfolio(single_problem(8)),
 }
 
