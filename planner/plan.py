@@ -72,7 +72,7 @@ class PlanSettings:
     n_paths: int = 20_000
     n_what_if_paths: int = 3_000
     seed: int = 20260101
-    solver: SolverSettings = SolverSettings()  # noqa: RUF009 - it is frozen
+    solver: SolverSettings | None = None
     what_if_solver: SolverSettings = SolverSettings(12, 12, 8, 48)  # noqa: RUF009
     rules: tuple[str, ...] | None = None
     what_ifs: bool = True

@@ -26,18 +26,6 @@ from numpy.typing import ArrayLike
 
 from planner.piecewise import FloatArray
 
-INCOME_GAMBLE_RISK_AVERSION = {
-    (False, False): 5.0,
-    (False, True): 2.7,
-    (True, False): 1.4,
-    (True, True): 0.8,
-}
-"""(accepts a one-third cut, accepts the second gamble) -> risk aversion.
-
-The groups are those of Barsky, Juster, Kimball & Shapiro (1997), Quarterly Journal of Economics
-112(2) 537-579, bounded by 3.76, 2 and 1; the value that stands for each group is our choice.
-"""
-
 
 @dataclass(frozen=True, slots=True)
 class SpendingUtility:

@@ -314,13 +314,15 @@ def yaari_closed_form(pension: float) -> tuple[FloatArray, int]:
     return np.where(np.arange(75) < n, first * share, pension), n
 
 
-def yaari_path(pension: float, settings: SolverSettings) -> FloatArray:
+def yaari_path(pension: float, factor: float = 1.0) -> FloatArray:
     """Spending on the one path on which the client lives to the end, (75,)."""
     problem = yaari_problem(pension)
     status = np.zeros((1, 76), dtype=np.int16)
     status[0, -1] = 1
     lives_on = Scenarios(status, node=np.zeros((1, 75), dtype=np.int16))
-    return simulate(problem, solve(problem, settings), lives_on).spending[0]
+    return simulate(
+        problem, solve(problem, SolverSettings.for_problem(problem).scaled(factor)), lives_on
+    ).spending[0]
 
 
 # Recomputed; an independent constrained optimiser on the raw problem agrees. Yaari (1965), Review of
@@ -335,7 +337,7 @@ def test_yaari_spending_with_a_pension(pension: float, first: float, n: int) -> 
     expected, years = yaari_closed_form(pension)
     assert years == n
     assert expected[0] == pytest.approx(first, abs=6e-7)  # the printed digits
-    path = yaari_path(pension, SolverSettings())
+    path = yaari_path(pension)
     assert path[0] == pytest.approx(first, rel=SPENDING_TOLERANCE)
     assert_allclose(path[:25], expected[:25], rtol=SPENDING_TOLERANCE)
     assert_allclose(path[n + 5 : 60], expected[n + 5 : 60], rtol=SPENDING_TOLERANCE)
@@ -345,10 +347,10 @@ def test_yaari_path_down_to_the_pension() -> None:
     """c_0 10.4162192, c_10 10.0480052, c_34 5.3184569, then the pension of 5.
 
     Savings end in year 35, where spending has a kink in wealth that linear reading between nodes
-    cuts: on eight times as many nodes the printed years hold within 0.1 %, the last two before the
+    cuts: on four times as many nodes the printed years hold within 0.1 %, the last two before the
     kink within 0.2 %; what year 34 spends too much, year 35 lacks.
     """
-    path = yaari_path(5.0, SolverSettings().scaled(8))
+    path = yaari_path(5.0, 4)
     assert_allclose(path[[0, 10, 34]], [10.4162192, 10.0480052, 5.3184569], rtol=SPENDING_TOLERANCE)
     assert_allclose(path[36:60], 5.0, rtol=SPENDING_TOLERANCE)
     assert_allclose(path[:60], yaari_closed_form(5.0)[0][:60], rtol=2e-3)
@@ -380,7 +382,7 @@ def test_last_period_legacy(wealth: float, legacy: float, gamma: float) -> None:
     which linear reading between nodes cuts.
     """
     problem = lockwood_problem(wealth, gamma)
-    policy = solve(problem, SolverSettings().scaled(8))
+    policy = solve(problem, SolverSettings.for_problem(problem).scaled(2))
     assert wealth - spent(policy, problem, 0, wealth) == pytest.approx(legacy, abs=SPENDING_TOLERANCE * 18)
 
     best = problem.utility.value(wealth - legacy) + problem.estate.value(legacy)

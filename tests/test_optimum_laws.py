@@ -66,7 +66,7 @@ HOUSEHOLDS = {
 def solved(name: str, factor: float = 1.0) -> tuple[Problem, OptimalPolicy]:
     """A household of the table and its policy, on a grid `factor` times as fine as the ordinary one."""
     problem = HOUSEHOLDS[name]()
-    return problem, solve(problem, SolverSettings().scaled(factor))
+    return problem, solve(problem, SolverSettings.for_problem(problem).scaled(factor))
 
 
 def state_of(balances: FloatArray, status: int = 0) -> State:
@@ -118,10 +118,12 @@ def test_value_at_the_nodes_is_the_worth_of_the_choice_carried_out(name: str) ->
     """Grid points go through `advance` for every return node; V = n f(c/n) + beta E[V next] comes back.
 
     Choices at nodes are the recursion's own, so what is left is its tables' interpolation over cash and
-    tax-deferred and the portfolio read between closing nodes: median within 0.02 %, 95 % of nodes within
-    0.4 % of a certainty equivalent. A leak of money (tax, drag, a contribution) would be 1 % and more.
+    tax-deferred, next year's value between its nodes (here solved anew there, in the recursion
+    interpolated) and the portfolio read between closing nodes: on half as many nodes again as usual,
+    median within 0.02 %, 95 % of nodes within 0.4 % of a certainty equivalent. A leak of money (tax,
+    drag, a contribution) would be 1 % and more.
     """
-    problem, policy = solved(name)
+    problem, policy = solved(name, 1.5)
     grids = [grid.nodes for grid in policy.grids]
     x = np.stack([axis.ravel() for axis in np.meshgrid(*grids, indexing="ij")], axis=1)
     x = x[(x.sum(axis=1) < 3 * problem.wealth) & (x.sum(axis=1) > 0.1 * problem.wealth)]

@@ -89,7 +89,7 @@ def test_one_account_agrees_with_brute_force() -> None:
     problem = one_account()
     with warnings.catch_warnings():
         wealth, value, spending = by_brute_force(problem)
-    policy = solve(problem, SolverSettings().scaled(8))
+    policy = solve(problem, SolverSettings.for_problem(problem).scaled(2))
     chosen = slice(72, 216, 8)  # 29,000 to 253,000: far from the top in all likely futures
     balances = np.zeros((18, 3))
     balances[:, 0] = wealth[chosen]

@@ -15,7 +15,7 @@ import numpy as np
 from planner.optimum.grids import LogGrid, lagrange_matrix
 from planner.piecewise import FloatArray
 from planner.preferences import SpendingUtility
-from planner.problem import Problem
+from planner.problem import IntArray, Problem
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -26,11 +26,15 @@ class GrowthMaps:
     ----------
     maps : tuple of 3 ndarrays of shape (n_portfolios * n_nodes, n_i, n_i)
         Row: node of account i (plus its contribution) after growth.
+    cells : tuple of 3 ndarrays of int, shape (n_portfolios * n_nodes, n_i)
+        Cell of the grown node: the interpolated value is kept between the values at its ends, so
+        that a cubic cannot overshoot beside a cliff. -1 beyond the last node, where none is kept.
     estate : ndarray of shape (n_portfolios, n1, n2, n3)
         E[v(estate)] of the grown nodes; zeros where no legacy is wished.
     """
 
     maps: tuple[FloatArray, FloatArray, FloatArray]
+    cells: tuple[IntArray, IntArray, IntArray]
     estate: FloatArray
 
 
@@ -39,12 +43,13 @@ def growth_maps(problem: Problem, grids: Sequence[LogGrid], contribution: FloatA
     n_portfolios, n_nodes = problem.gross.shape
     growth = [problem.gross - problem.drag[:, None], problem.gross, problem.gross]
     grown = []
-    maps = []
+    maps, cells = [], []
     for grid, factor, paid in zip(grids, growth, contribution, strict=True):
         points = (grid.nodes + paid) * factor.reshape(-1, 1)
         grown.append(points)
         flat = lagrange_matrix(grid.nodes, points.ravel())
         maps.append(flat.reshape(n_portfolios * n_nodes, grid.size, grid.size))
+        cells.append(np.where(points > grid.nodes[-1], -1, grid.cell(points)))
     shape = tuple(grid.size for grid in grids)
     if problem.estate.wanted:
         passed = (
@@ -57,7 +62,7 @@ def growth_maps(problem: Problem, grids: Sequence[LogGrid], contribution: FloatA
         estate = np.tensordot(problem.node_weights, value, axes=(0, 1))
     else:
         estate = np.zeros((n_portfolios, *shape))
-    return GrowthMaps((maps[0], maps[1], maps[2]), estate)
+    return GrowthMaps((maps[0], maps[1], maps[2]), (cells[0], cells[1], cells[2]), estate)
 
 
 def expected_value(
@@ -66,11 +71,40 @@ def expected_value(
     """E[g(C(y R_p))] for each portfolio: (n1, n2, n3) levels -> (n_portfolios, n1, n2, n3)."""
     n1, n2, n3 = level.shape
     map1, map2, map3 = growth.maps
+    cell1, cell2, cell3 = growth.cells
     n_maps = map1.shape[0]
-    moved = (map1.reshape(n_maps * n1, n1) @ level.reshape(n1, n2 * n3)).reshape(n_maps, n1, n2, n3)
+    flat = level.reshape(n1, n2 * n3)
+    moved = _between(map1.reshape(n_maps * n1, n1) @ flat, flat, cell1.ravel())
+    moved = moved.reshape(n_maps, n1, n2, n3)
     if n2 > 1:
-        moved = map2[:, None] @ moved
+        # Axes move to the front in turn: (maps, n2, n1 n3), then (maps, n3, n2 n1).
+        before = np.ascontiguousarray(moved.transpose(0, 2, 1, 3)).reshape(n_maps, n2, n1 * n3)
+        moved = _between(
+            (map2 @ before).reshape(n_maps * n2, n1 * n3), before.reshape(n_maps * n2, n1 * n3), _rows(cell2)
+        )
+        moved = moved.reshape(n_maps, n2, n1, n3).transpose(0, 2, 1, 3)
     if n3 > 1:
-        moved = (moved.reshape(n_maps, n1 * n2, n3) @ map3.transpose(0, 2, 1)).reshape(n_maps, n1, n2, n3)
-    value = smooth.value(moved).reshape(problem.n_portfolios, -1, n1 * n2 * n3)
+        before = np.ascontiguousarray(moved.transpose(0, 3, 1, 2)).reshape(n_maps, n3, n1 * n2)
+        moved = _between(
+            (map3 @ before).reshape(n_maps * n3, n1 * n2), before.reshape(n_maps * n3, n1 * n2), _rows(cell3)
+        )
+        moved = moved.reshape(n_maps, n3, n1, n2).transpose(0, 2, 3, 1)
+    value = smooth.value(np.ascontiguousarray(moved)).reshape(problem.n_portfolios, -1, n1 * n2 * n3)
     return (problem.node_weights @ value).reshape(problem.n_portfolios, n1, n2, n3)
+
+
+def _rows(cells: IntArray) -> IntArray:
+    """Row numbers of cells (n_maps, n) in arrays whose rows run over maps, then nodes; -1 stays -1."""
+    start = cells.shape[1] * np.arange(cells.shape[0])[:, None]
+    return np.where(cells < 0, -1, cells + start).ravel()
+
+
+def _between(values: FloatArray, ends: FloatArray, cell: IntArray) -> FloatArray:
+    """Keep each row of values between rows cell and cell + 1 of ends, where cell >= 0."""
+    if ends.shape[0] == 1:
+        return values
+    at = np.maximum(cell, 0)
+    left, right = ends[at], ends[at + 1]
+    kept = np.clip(values, np.minimum(left, right), np.maximum(left, right))
+    kept[cell < 0] = values[cell < 0]
+    return kept

@@ -54,17 +54,19 @@ class LogGrid:
 def lagrange_matrix(nodes: FloatArray, points: FloatArray) -> FloatArray:
     """Rows that interpolate at `points` (m,) values given on `nodes` (n,): (m, n).
 
-    4-point Lagrange form in x itself, so exact for cubics; linear beyond the last node; with one
-    node the function is constant.
+    4-point Lagrange form in x itself, so exact for straight lines everywhere and for cubics off the
+    first cell; linear in the first cell and beyond the last node; with one node constant. The
+    first cell is apart because a household that runs out of an account may fall off a cliff
+    there, and a cubic across the cliff would overshoot beside it.
     """
     n = nodes.size
     matrix = np.zeros((points.size, n))
     if n == 1:
         matrix[:, 0] = 1.0
         return matrix
-    width = min(STENCIL, n)
+    width, first = _stencil(n)
     cell = np.clip(np.searchsorted(nodes, points, side="right") - 1, 0, n - 2)
-    start = np.clip(cell - (width // 2 - 1), 0, n - width)
+    start = np.clip(cell - (width // 2 - 1), first, n - width)
     columns = start[:, None] + np.arange(width)
     local = nodes[columns]
     rows = np.arange(points.size)[:, None]
@@ -78,20 +80,35 @@ def lagrange_matrix(nodes: FloatArray, points: FloatArray) -> FloatArray:
         matrix[beyond] = 0.0
         matrix[beyond, n - 1] = share
         matrix[beyond, n - 2] = 1.0 - share
+    inside = cell == 0
+    if inside.any():
+        share = points[inside] / nodes[1]
+        matrix[inside] = 0.0
+        matrix[inside, 1] = share
+        matrix[inside, 0] = 1.0 - share
     return matrix
 
 
+def _stencil(n: int) -> tuple[int, int]:
+    """Width of the Lagrange form on n nodes, and the first node it may use."""
+    return (min(STENCIL, n - 1), 1) if n > 2 else (2, 0)
+
+
 def derivative_matrix(nodes: FloatArray) -> FloatArray:
-    """Slopes at the nodes of values on them, (n, n): mean of the two cells' Lagrange cubics."""
+    """Slopes at the nodes of values on them, (n, n): mean of the two cells' Lagrange cubics.
+
+    The first cell is linear, as in `lagrange_matrix`: it sets the slope at the first node alone.
+    """
     n = nodes.size
     matrix = np.zeros((n, n))
     if n == 1:
         return matrix
-    width = min(STENCIL, n)
-    for i in range(n):
-        cells = {min(max(i - 1, 0), n - 2), min(i, n - 2)}
+    matrix[0, :2] = np.array([-1.0, 1.0]) / nodes[1]
+    width, first = _stencil(n)
+    for i in range(1, n):
+        cells = {min(max(i - 1, first), n - 2), min(i, n - 2)}
         for cell in cells:
-            start = int(np.clip(cell - (width // 2 - 1), 0, n - width))
+            start = int(np.clip(cell - (width // 2 - 1), first, n - width))
             columns = np.arange(start, start + width)
             matrix[i, columns] += _node_slopes(nodes[columns], i - start) / len(cells)
     return matrix
@@ -111,11 +128,31 @@ def _node_slopes(local: FloatArray, at: int) -> FloatArray:
     return weights
 
 
+def limited_slopes(slopes: FloatArray, values: FloatArray, nodes: FloatArray) -> FloatArray:
+    """Keep slopes along axis 0 where Hermite interpolation of increasing values stays monotone.
+
+    Between the chords on either side (where a concave function has its slope), and at most three
+    times the flatter one (Fritsch & Carlson 1980, SIAM J. Numer. Anal. 17(2) 238-246: a sufficient
+    condition). slopes, values (n, ...); nodes (n,).
+    """
+    if nodes.size == 1:
+        return slopes
+    gaps = np.diff(nodes).reshape((-1,) + (1,) * (values.ndim - 1))
+    chords = np.diff(values, axis=0) / gaps
+    left = np.concatenate([chords[:1], chords])
+    right = np.concatenate([chords, chords[-1:]])
+    flatter, steeper = np.minimum(left, right), np.maximum(left, right)
+    # The last node has one chord; a concave function is flatter there.
+    flatter[-1] *= 0.5
+    return np.clip(slopes, flatter, np.maximum(flatter, np.minimum(steeper, 3.0 * flatter)))
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class CashGrid:
     """Nodes for cash on hand, evenly spaced in asinh(M/scale), with one node doubled at a kink.
 
-    Cash may be negative. The doubled node lets a function have two slopes there.
+    Cash may be negative. The doubled node lets a function have two slopes there; 0 is a node too,
+    since a household without any cash is at a corner.
 
     Attributes
     ----------
@@ -133,15 +170,18 @@ class CashGrid:
 
     @classmethod
     def build(cls, n: int, scale: float, low: float, high: float, kink: float) -> CashGrid:
-        """About n nodes that cover [low, high] and contain `kink` twice."""
-        at = np.arcsinh(kink / scale)
-        step = float((np.arcsinh(high / scale) - np.arcsinh(low / scale)) / (n - 2))
-        below = max(1, int(np.ceil((at - np.arcsinh(low / scale)) / step)))
-        above = max(1, int(np.ceil((np.arcsinh(high / scale) - at) / step)))
+        """About n nodes that cover [low, high] and contain 0, and `kink` > 0 twice."""
+        at = float(np.arcsinh(kink / scale))
+        least, most = float(np.arcsinh(low / scale)), float(np.arcsinh(high / scale))
+        to_kink = max(1, round(at / ((most - least) / (n - 2))))
+        step = at / to_kink
+        below = max(to_kink, int(np.ceil((at - least) / step - 1e-9)))
+        above = max(1, int(np.ceil((most - at) / step - 1e-9)))
         places = scale * np.sinh(at + step * np.arange(-below, above + 1))
+        places[below - to_kink] = 0.0
         places[below] = kink
         nodes = np.insert(places, below, kink)
-        return cls(nodes, scale, step, float(at - step * below), below)
+        return cls(nodes, scale, step, at - step * below, below)
 
     def cell(self, cash: FloatArray) -> IntArray:
         """Index k of the cell [node k, node k+1] that holds `cash`, clipped (any shape)."""

@@ -87,11 +87,14 @@ class CashTable:
     grid : CashGrid
     level, slope : ndarray of shape (n2, n_cash, n3)
         g^-1(G / weight) and its slope along money (envelope theorem: marginal utility).
+    spending : ndarray of the same shape
+        c, money a year.
     """
 
     grid: CashGrid
     level: FloatArray
     slope: FloatArray
+    spending: FloatArray
 
 
 def hermite(
@@ -215,7 +218,21 @@ def cash_table(
         spending[draw], marginal[draw], later[draw] = c, price, value
 
     table = smooth.inverse((felicity.value(spending) + later) / weight)
-    return CashTable(grid, table, marginal / (weight * smooth.marginal(table)))
+    slope = marginal / (weight * smooth.marginal(table))
+    return CashTable(grid, table, np.minimum(slope, _steepest(table, m)), spending)
+
+
+def _steepest(level: FloatArray, nodes: FloatArray) -> FloatArray:
+    """Largest slope along axis 1 with which Hermite interpolation stays monotone: three chords.
+
+    The doubled node has one chord on each side. See `grids.limited_slopes`.
+    """
+    gaps = np.diff(nodes)
+    chords = np.diff(level, axis=1) / np.where(gaps > 0, gaps, 1.0)[:, None]
+    chords[:, gaps == 0] = np.inf
+    end = np.full_like(chords[:, :1], np.inf)
+    flattest = np.minimum(np.concatenate([end, chords], axis=1), np.concatenate([chords, end], axis=1))
+    return np.asarray(3.0 * np.maximum(flattest, 0.0))
 
 
 def _bracket(points: FloatArray, knots: FloatArray) -> IntArray:

@@ -322,10 +322,12 @@ def _node_levels(
     cell = grid.cell(money)
     ((h0, g0), _), ((h1, g1), _) = hermite_basis(money, grid.nodes[cell], grid.nodes[cell + 1])
     row = first + cell
-    # Without conversions money is the same for all tax-free nodes: whole rows are read at once.
-    at: tuple[object, ...] = (row, np.arange(n3)) if s.conversions else (row[..., 0],)
-    after: tuple[object, ...] = (row + 1, np.arange(n3)) if s.conversions else (row[..., 0] + 1,)
-    value = h0 * level[at] + g0 * slope[at] + h1 * level[after] + g1 * slope[after]  # type: ignore[index]
+
+    def pick(values: FloatArray, step: int) -> FloatArray:
+        # Without conversions money is the same for all tax-free nodes: whole rows are read at once.
+        return values[row + step, np.arange(n3)] if s.conversions else values[row[..., 0] + step]
+
+    value = h0 * pick(level, 0) + g0 * pick(slope, 0) + h1 * pick(level, 1) + g1 * pick(slope, 1)
     full = np.full((n1, n2, n2, n3), -np.inf)
     full[:, a, j, :] = value
     best = full.argmax(axis=2)

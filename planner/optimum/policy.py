@@ -6,9 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from planner.optimum.grids import LogGrid, lagrange_matrix
-from planner.optimum.inner import TINY_SLOPE, Felicity
-from planner.optimum.outer import Outer, situation_of
+from planner.optimum.grids import LogGrid
+from planner.optimum.inner import TINY_SLOPE
+from planner.optimum.outer import Outer, OuterChoice, Situation
 from planner.optimum.surface import Surface
 from planner.piecewise import FloatArray
 from planner.preferences import SpendingUtility
@@ -32,6 +32,8 @@ class OptimalPolicy:
         g = w2 + k, money taken out of tax-deferred.
     surfaces : n_years tuples of n_statuses Surface
         The year's value once g is fixed, for choices at balances between the nodes.
+    situations : n_years tuples of n_statuses Situation
+        The year's income, tax and limits.
     portfolio : ndarray of int, same shape
         Best portfolio at *closing* balances y (after the year's choices) on the same nodes.
     weights : ndarray of shape (n_years, n_statuses)
@@ -45,6 +47,7 @@ class OptimalPolicy:
     willing: FloatArray
     gross: FloatArray
     surfaces: tuple[tuple[Surface, ...], ...]
+    situations: tuple[tuple[Situation, ...], ...]
     portfolio: IntArray
     weights: FloatArray
     smooth: SpendingUtility
@@ -66,13 +69,13 @@ class OptimalPolicy:
         return 0
 
     def certainty_equivalent(self, balances: FloatArray, t: int = 0, status: int = 0) -> FloatArray:
-        """C_t(x, h) at balances (n, 3): 4-point Lagrange along each axis; (n,)."""
-        rows = [lagrange_matrix(grid.nodes, balances[:, i]) for i, grid in enumerate(self.grids)]
-        return np.einsum("ni,nj,nk,ijk->n", *rows, self.level[t, status], optimize=True)
+        """C_t(x, h) at balances (n, 3), the year's choice solved there; (n,)."""
+        return self._choose(t, status, balances)[1].level
 
     def value(self, balances: FloatArray, t: int = 0, status: int = 0) -> FloatArray:
         """V_t(x, h), expected utility from year t on, at balances (n, 3); (n,)."""
-        return self.weights[t, status] * self.smooth.value(self.certainty_equivalent(balances, t, status))
+        level = self.certainty_equivalent(balances, t, status)
+        return np.asarray(self.weights[t, status] * self.smooth.value(level))
 
     def level_spending(self, balances: FloatArray) -> float:
         """f^-1(V_0 / A_0): steady spending worth as much (meaningful without a legacy)."""
@@ -88,7 +91,7 @@ class OptimalPolicy:
             if not here.size:
                 continue
             x = state.balances[here]
-            read = self.read(problem, t, h, x)
+            read = self.read(t, h, x)
             spending[here] = read.spending
             withdraw[here], convert[here], y = settle(problem, t, h, x, read.gross, read.spending)
             corner, weight = self._corners(y)
@@ -96,24 +99,31 @@ class OptimalPolicy:
             portfolio[here] = np.rint(choice).astype(np.int64)
         return Decision(withdraw, convert, spending, portfolio, np.zeros((n, 0)))
 
-    def read(self, problem: Problem, t: int, h: int, balances: FloatArray) -> Reading:
+    def read(self, t: int, h: int, balances: FloatArray) -> Reading:
         """Choices at balances (n, 3) in year t and status h: the year's choice solved anew there.
 
         The continuation is the recursion's; only this year's g and c are chosen for the balances
         given, starting from what the surrounding nodes chose.
         """
+        outer, choice = self._choose(t, h, balances)
+        everywhere = np.arange(choice.gross.size)
+        cash, left, _, free = outer.place(everywhere, choice.gross, np.zeros(everywhere.size))[:4]
+        assert free is not None
+        spending = outer.surface.spending(cash, left, free)
+        slope = np.maximum(choice.cash_slope, TINY_SLOPE)
+        price = self.weights[t, h] * self.smooth.marginal(choice.level) * slope
+        return Reading(spending, choice.gross, np.asarray(price), choice.exchange)
+
+    def _choose(self, t: int, h: int, balances: FloatArray) -> tuple[Outer, OuterChoice]:
         corner, weight = self._corners(balances)
         nodes = self.gross[t, h].ravel()[corner]
-        situation = situation_of(problem, t, h)
-        outer = Outer(self.surfaces[t][h], situation, (balances[:, 0], balances[:, 1], balances[:, 2]))
+        outer = Outer(
+            self.surfaces[t][h], self.situations[t][h], (balances[:, 0], balances[:, 1], balances[:, 2])
+        )
         gross = np.clip((nodes * weight).sum(axis=0), outer.low, outer.high)
         everywhere = np.arange(gross.size)
         level = outer.evaluate(everywhere, gross, np.zeros(gross.size))[0]
-        choice = outer.search(level, gross, (nodes.min(axis=0), nodes.max(axis=0)))
-        slope = np.maximum(choice.cash_slope, TINY_SLOPE)
-        price = self.weights[t, h] * self.smooth.marginal(choice.level) * slope
-        felicity = Felicity(self.utility, self.smooth, float(problem.need[t, h]), problem.ceiling)
-        return Reading(felicity.spend(price), choice.gross, price, choice.exchange)
+        return outer, outer.search(level, gross, (nodes.min(axis=0), nodes.max(axis=0)))
 
     def _corners(self, balances: FloatArray) -> tuple[IntArray, FloatArray]:
         """Flat node indices and weights of the enclosing cell: (8, n) or fewer for absent accounts."""

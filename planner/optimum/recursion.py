@@ -17,7 +17,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from planner.optimum.expectation import GrowthMaps, expected_value, growth_maps
-from planner.optimum.grids import CashGrid, LogGrid, derivative_matrix
+from planner.optimum.grids import CashGrid, LogGrid, derivative_matrix, limited_slopes
 from planner.optimum.inner import TINY_SLOPE, Continuation, Felicity, cash_table
 from planner.optimum.outer import best_on_nodes, situation_of
 from planner.optimum.policy import OptimalPolicy
@@ -45,6 +45,18 @@ class SolverSettings:
     cash: int = 60
     top: float = 4.0
     scale: float = 25.0
+
+    @classmethod
+    def for_problem(cls, problem: Problem) -> SolverSettings:
+        """Return default grids: an absent account's nodes go to the others."""
+        _, deferred, free = problem.has_account
+        if deferred and free:
+            return cls()
+        if deferred:
+            return cls(taxable=28, tax_deferred=40, cash=90)
+        if free:
+            return cls(taxable=32, tax_free=24, cash=90)
+        return cls(taxable=160, cash=240, scale=50.0)
 
     def scaled(self, factor: float) -> SolverSettings:
         """The same with every grid `factor` times as fine."""
@@ -98,7 +110,7 @@ def cash_range(problem: Problem, grids: tuple[LogGrid, LogGrid, LogGrid]) -> tup
             low = min(low, float(problem.income[t, h]) + min(kept, 0.0))
             high = max(high, float(problem.income[t, h]))
     pooled = grids[2].nodes[-1] if problem.conversions else 0.0
-    return low - 1.0, high + grids[0].nodes[-1] + grids[1].nodes[-1] + pooled
+    return low - grids[0].scale, high + grids[0].nodes[-1] + grids[1].nodes[-1] + pooled
 
 
 def solve(
@@ -118,7 +130,7 @@ def solve(
     OptimalPolicy
         Values and choices on the nodes, for every year and status.
     """
-    settings = settings or SolverSettings()
+    settings = settings or SolverSettings.for_problem(problem)
     grids = build_grids(problem, settings)
     shape = (grids[0].size, grids[1].size, grids[2].size)
     n_years, n_statuses = problem.need.shape
@@ -130,6 +142,7 @@ def solve(
     willing = np.zeros_like(level)
     gross = np.zeros_like(level)
     surfaces: list[list[Surface]] = [[] for _ in range(n_years)]
+    situations = [[situation_of(problem, t, h) for h in range(n_statuses)] for t in range(n_years)]
     portfolio = np.zeros(level.shape, dtype=np.int64)
     maps: dict[tuple[float, ...], GrowthMaps] = {}
 
@@ -152,7 +165,7 @@ def solve(
 
             felicity = Felicity(problem.utility, smooth, float(problem.need[t, h]), problem.ceiling)
             following_level = _continuation(
-                later, float(later_weights[t, h]), problem.discount, smooth, slopes
+                later, float(later_weights[t, h]), problem.discount, smooth, slopes, grids
             )
             grid = CashGrid.build(
                 settings.cash, grids[0].scale, low, high, felicity.need * problem.utility.essential
@@ -181,6 +194,7 @@ def solve(
         willing=willing,
         gross=gross,
         surfaces=tuple(tuple(row) for row in surfaces),
+        situations=tuple(tuple(row) for row in situations),
         portfolio=portfolio,
         weights=weights,
         smooth=smooth,
@@ -189,14 +203,25 @@ def solve(
 
 
 def _continuation(
-    later: FloatArray, weight: float, discount: float, smooth: SpendingUtility, slopes: list[FloatArray]
+    later: FloatArray,
+    weight: float,
+    discount: float,
+    smooth: SpendingUtility,
+    slopes: list[FloatArray],
+    grids: tuple[LogGrid, LogGrid, LogGrid],
 ) -> Continuation:
     """Level and slopes of J, in the inner choice's axis order (tax-deferred, taxable, tax-free)."""
     if weight == 0.0:
         level = np.zeros(later.shape)
     else:
         level = smooth.inverse(later / weight)
-    level = np.ascontiguousarray(level.transpose(1, 0, 2))
-    slope1 = slopes[0] @ level
-    slope3 = level[:, 0, :] @ slopes[2].T
-    return Continuation(level, slope1, slope3, discount * weight)
+    slope1 = limited_slopes(np.tensordot(slopes[0], level, axes=1), level, grids[0].nodes)
+    at_zero = level[0].T  # (n3, n2): along tax-free where taxable is used up
+    slope3 = limited_slopes(slopes[2] @ at_zero, at_zero, grids[2].nodes)
+    first = (1, 0, 2)
+    return Continuation(
+        np.ascontiguousarray(level.transpose(first)),
+        np.ascontiguousarray(slope1.transpose(first)),
+        slope3.T,
+        discount * weight,
+    )

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from planner.optimum.grids import LogGrid
+from planner.optimum.grids import LogGrid, limited_slopes
 from planner.optimum.inner import CashTable
 from planner.piecewise import FloatArray
 from planner.problem import IntArray
@@ -34,12 +34,16 @@ class Surface:
             return (slopes2 @ values.reshape(n2, -1)).reshape(self.shape)
 
         def along3(values: FloatArray) -> FloatArray:
-            return values @ slopes3.T
+            return np.asarray(values @ slopes3.T)
 
         level, slope = table.level, table.slope
-        parts = [level, slope, along2(level), along2(slope)]
+        level2 = limited_slopes(along2(level), level, deferred.nodes)
+        level3 = limited_slopes(along3(level).transpose(2, 0, 1), level.transpose(2, 0, 1), free.nodes)
+        level3 = level3.transpose(1, 2, 0)
+        parts = [level, slope, level2, along2(slope)]
         self.packed = np.stack(parts, axis=-1).reshape(-1, 4)
-        self.packed3 = np.stack([along3(part) for part in parts], axis=-1).reshape(-1, 4)
+        parts3 = [level3, along3(slope), along3(level2), along3(parts[3])]
+        self.packed3 = np.stack(parts3, axis=-1).reshape(-1, 4)
 
     def __call__(
         self, cash: FloatArray, deferred: FloatArray, node3: IntArray, free: FloatArray | None
@@ -77,6 +81,26 @@ class Surface:
             total[3] += dh * plain[0] + dg * sloped[0]
         return total[0], total[1], total[2], total[3]
 
+    def spending(self, cash: FloatArray, deferred: FloatArray, free: FloatArray) -> FloatArray:
+        """Spending at scattered points (n,), linear between the nodes.
+
+        Linear because spending has kinks where it starts to follow cash one for one, and is itself
+        linear beyond them.
+        """
+        grid = self.table.grid
+        _, n_cash, n3 = self.shape
+        m, j, i3 = grid.cell(cash), self.deferred.cell(deferred), self.free.cell(free)
+        total = np.zeros(cash.size)
+        table = self.table.spending.ravel()
+        width = grid.nodes[m + 1] - grid.nodes[m]
+        share = (cash - grid.nodes[m]) / width
+        for at2, weight2 in _linear(self.deferred, deferred, j):
+            for at3, weight3 in _linear(self.free, free, i3):
+                base = (at2 * n_cash + m) * n3 + at3
+                left, right = table[base], table[base + n3]
+                total += weight2 * weight3 * (left + share * (right - left))
+        return total
+
     def _sum(
         self, packed: FloatArray, base: IntArray, rows: tuple[int, ...], basis_m: Basis, basis_2: Basis
     ) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -94,6 +118,14 @@ class Surface:
                 along_2 = along_2 + dh2 * flat + dg2 * cross
                 along_m = along_m + h2 * (dhm * v + dgm * vm) + g2 * (dhm * v2 + dgm * vm2)
         return value, along_m, along_2
+
+
+def _linear(grid: LogGrid, x: FloatArray, cell: IntArray) -> list[tuple[IntArray, FloatArray]]:
+    """Node indices and weights of linear interpolation, straight on beyond the last node."""
+    if grid.size == 1:
+        return [(cell, np.ones(x.size))]
+    share = (x - grid.nodes[cell]) / (grid.nodes[cell + 1] - grid.nodes[cell])
+    return [(cell, 1.0 - share), (cell + 1, share)]
 
 
 def hermite_basis(x: FloatArray, left: FloatArray, right: FloatArray) -> Basis:
