@@ -119,11 +119,11 @@ def test_value_at_the_nodes_is_the_worth_of_the_choice_carried_out(name: str) ->
 
     Choices at nodes are the recursion's own, so what is left is its tables' interpolation over cash and
     tax-deferred, next year's value between its nodes (here solved anew there, in the recursion
-    interpolated) and the portfolio read between closing nodes: on half as many nodes again as usual,
+    interpolated) and the portfolio read between closing nodes: on twice the usual nodes,
     median within 0.02 %, 95 % of nodes within 0.4 % of a certainty equivalent. A leak of money (tax,
     drag, a contribution) would be 1 % and more.
     """
-    problem, policy = solved(name, 1.5)
+    problem, policy = solved(name, 2.0)
     grids = [grid.nodes for grid in policy.grids]
     x = np.stack([axis.ravel() for axis in np.meshgrid(*grids, indexing="ij")], axis=1)
     x = x[(x.sum(axis=1) < 3 * problem.wealth) & (x.sum(axis=1) > 0.1 * problem.wealth)]
