@@ -347,10 +347,11 @@ def test_a_client_in_the_last_year_of_the_table():
 
 
 def test_no_savings_at_all():
-    """All income is spent, up to 2 %: on the small grid the first node above 0 is far away."""
-    plan = make_plan(read(single(accounts=(Account("Empty", "Lin", AccountType.TAXABLE, 0.0),))), QUICK)
+    """All income is spent, up to 0.3 %: reading spending between nodes cuts the kink where saving starts."""
+    empty = single(accounts=(Account("Empty", "Lin", AccountType.TAXABLE, 0.0),))
+    plan = make_plan(read(empty), replace(QUICK, solver=None))
     assert_adds_up(plan.this_year)
-    assert_allclose(plan.this_year.spending, 14_000, rtol=0.02)
+    assert_allclose(plan.this_year.spending, 14_000, rtol=0.003)
     assert plan.strategies[0].chance_below_essential == 1
     assert all(result.wealth_cost == 0 for result in plan.strategies)  # there is no wealth to lose
 

@@ -258,7 +258,8 @@ def test_first_year_without_gains_is_the_composed_tax(rules, people, withdrawal,
     direct = rules.first_year_tax(
         people, withdrawal=withdrawal, law_year=rules.year, together=together, **extra
     )
-    assert float(composed(withdrawal)) == pytest.approx(direct, abs=ROUNDING)
+    # A kink within a hundredth of a cent of another may be dropped as collinear.
+    assert float(composed(withdrawal)) == pytest.approx(direct, abs=1e-4)
 
 
 @pytest.mark.parametrize("rules", ALL_RULES, ids=lambda rules: rules.name)
