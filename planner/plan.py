@@ -190,6 +190,7 @@ def make_plan(
     settings: PlanSettings | None = None,
     progress: Progress | None = None,
     workbook_name: str = "",
+    also: Sequence[tuple[str, Household]] = (),
 ) -> Plan:
     """Make the whole plan for a client.
 
@@ -203,6 +204,8 @@ def make_plan(
         See `Progress`.
     workbook_name
         File name, for the record.
+    also
+        Name and household of further what-ifs, planned for whatever the settings say.
 
     Returns
     -------
@@ -217,7 +220,7 @@ def make_plan(
     settings = settings or PlanSettings()
     report = progress or (lambda share, what: None)
     household = read.household
-    what_ifs = _what_if_households(read) if settings.what_ifs else ()
+    what_ifs = (*(_what_if_households(read) if settings.what_ifs else ()), *also)
     # Measured on a couple with three accounts: a what-if is about a sixth of the plan without any.
     end_base = 6 / (7 + len(what_ifs)) if what_ifs else 1.0
 

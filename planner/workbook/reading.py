@@ -126,8 +126,18 @@ def read_workbook(path: str | Path) -> ReadWorkbook:
         The file cannot be read.
     """
     file = Path(path)
-    content = file.read_bytes()
-    data = scan(content, file.name)
+    return read_content(file.read_bytes(), file.name)
+
+
+def read_content(content: bytes, name: str) -> ReadWorkbook:
+    """Read the bytes of a client workbook; `name` is what its file is called, for messages.
+
+    Raises
+    ------
+    InputError
+        See `read_workbook`.
+    """
+    data = scan(content, name)
     lost = _lost_addresses(data)
     try:
         household, warnings = build(data)
