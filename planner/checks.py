@@ -9,15 +9,34 @@ from collections.abc import Iterable, Iterator, Sequence
 from planner.diagnostics import Diagnostic
 
 OLDEST = 130.0  # ages beyond are refused
+_MOST_LISTED = 20  # names in a message
+_LONGEST_COMPARED = 100  # comparing texts takes the product of their lengths
+
+
+def nearest(found: str, known: Iterable[str], cutoff: float = 0.6) -> str | None:
+    """Return the text most like the one found, None where none is; long texts are like no other."""
+    if len(found) > _LONGEST_COMPARED:
+        return None
+    short = [text for text in known if len(text) <= _LONGEST_COMPARED]
+    near = difflib.get_close_matches(found, short, n=1, cutoff=cutoff)
+    return near[0] if near else None
+
+
+def shortened(text: str, length: int = 60) -> str:
+    """Return a text as a message quotes it: cut where it is long."""
+    return text if len(text) <= length else f"{text[:length]}…"
 
 
 def near_miss(found: str, known: Sequence[str], what: str) -> str:
     """Return the end of a message: the nearest known name, else all of them."""
     by_folded = {name.casefold(): name for name in known}
-    near = difflib.get_close_matches(found.casefold(), list(by_folded), n=1)
-    if near:
-        return f"did you mean {by_folded[near[0]]!r}?"
-    return f"{what} {', '.join(repr(name) for name in known)}" if known else f"{what} none"
+    near = nearest(found.casefold(), by_folded)
+    if near is not None:
+        return f"did you mean {by_folded[near]!r}?"
+    if not known:
+        return f"{what} none"
+    listed = ", ".join(repr(name) for name in known[:_MOST_LISTED])
+    return f"{what} {listed}" + (f" and {len(known) - _MOST_LISTED} more" * (len(known) > _MOST_LISTED))
 
 
 def amount(path: str, value: float | None, *, signed: bool = False) -> Iterator[Diagnostic]:

@@ -17,6 +17,7 @@ FILE_CODES: Final[dict[str, str]] = {
     "file-not-xlsx": "not an .xlsx workbook at all",
     "file-damaged": "an .xlsx workbook cut short or damaged",
     "file-too-large": "far larger than a client workbook can be",
+    "file-entities": "an .xlsx workbook that declares XML entities",
 }
 
 CELL_CODES: Final[dict[str, str]] = {
@@ -30,6 +31,9 @@ CELL_CODES: Final[dict[str, str]] = {
     "column-missing": "a required column is absent",
     "column-unknown": "a column that is not read (warning)",
     "column-twice": "two columns with the same header",
+    "sheet-too-large": "a sheet with more filled cells than a client workbook can have",
+    "table-too-long": "a table with more rows than can be planned with",
+    "text-too-long": "a text longer than the cell can use",
     "value-missing": "a required cell is blank",
     "formula-not-computed": "a formula with no stored value",
     "cell-error": "a spreadsheet error such as #REF!",

@@ -59,7 +59,7 @@ def test_a_damaged_sheet_inside_a_sound_archive(tmp_path):
 
 
 def test_unpacking_to_a_vast_size_is_refused(tmp_path, monkeypatch):
-    monkeypatch.setattr("planner.workbook.scanning.LARGEST_UNPACKED", 1000)
+    monkeypatch.setattr("planner.workbook.archive.LARGEST_UNPACKED", 1000)
     assert found(saved(tmp_path))[0][0] == "file-too-large"
 
 

@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-import difflib
 from collections.abc import Iterable
 from typing import NoReturn
 
+from planner.checks import nearest
 from planner.diagnostics import Diagnostic, InputError
 from planner.workbook.data import TableData, WorkbookData
 from planner.workbook.fields import Sheet, label_keys, normalised
@@ -45,10 +45,10 @@ def _refuse(code: str, address: str, message: str) -> NoReturn:
 
 def _hint(found: str, known: Iterable[str]) -> str:
     by_key = {normalised(name): name for name in known}
-    near = difflib.get_close_matches(normalised(found), list(by_key), n=1)
-    near = near or [key for key in by_key if key.startswith(normalised(found))][:1]
+    near = nearest(normalised(found), by_key)
+    near = near or next((key for key in by_key if key.startswith(normalised(found))), None)
     if near:
-        return f"did you mean {by_key[near[0]]!r}?"
+        return f"did you mean {by_key[near]!r}?"
     return f"expected one of {', '.join(by_key.values())}" if by_key else "there is none"
 
 

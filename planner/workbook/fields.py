@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from enum import Enum
 
 _WORDS = re.compile(r"\w+")
+_LONGEST_LABEL = 300
 _BRACKETED_END = re.compile(r"\s*\([^()]*\)\s*$")
 
 
@@ -151,6 +152,8 @@ def normalised(text: str) -> str:
 
 def label_keys(text: str) -> tuple[str, ...]:
     """Return the ways a cell may match a label: in full, and without a bracketed end."""
+    if len(text) > _LONGEST_LABEL:
+        return (normalised(text),)  # the pattern below would take the square of the length
     full, short = normalised(text), normalised(_BRACKETED_END.sub("", text))
     return (full,) if short in ("", full) else (full, short)
 

@@ -6,7 +6,6 @@ Every function takes an `Entry` that is not blank and either returns the value o
 
 from __future__ import annotations
 
-import difflib
 import math
 import re
 from collections.abc import Callable
@@ -14,6 +13,7 @@ from datetime import date, datetime
 from decimal import Decimal, InvalidOperation
 from typing import Final, Literal
 
+from planner.checks import nearest
 from planner.household import LARGER_OF_THE_TWO, Rise
 from planner.workbook.data import Entry
 from planner.workbook.fields import Field, Kind, choice_value, normalised
@@ -21,6 +21,8 @@ from planner.workbook.fields import Field, Kind, choice_value, normalised
 EARLIEST_YEAR: Final = 1900
 LATEST_YEAR: Final = 2200
 OLDEST_AGE: Final = 130
+LONGEST_VALUE: Final = 200  # characters of a name, a number written as text, a choice
+LONGEST_TEXT: Final = 10_000  # characters of a text that is printed as it stands
 
 _SPACES: Final = "  \u00a0\u2009\u202f"
 _MONEY_SIGN: Final = re.compile(
@@ -290,8 +292,8 @@ def rise(entry: Entry) -> Rise:
     except CellProblem as problem:
         if problem.code == "share-percent":
             raise
-    near = difflib.get_close_matches(words, ("prices", "none", "prices up to 2.5%"), n=1)
-    hint = f"; did you mean {near[0]!r}?" if near else ""
+    near = nearest(words, ("prices", "none", "prices up to 2.5%"))
+    hint = f"; did you mean {near!r}?" if near else ""
     raise CellProblem("not-a-rise", f"found {_found(entry)}; {expected}{hint}")
 
 
@@ -320,8 +322,8 @@ def choice(entry: Entry, choices: tuple[str, ...]) -> str:
     for candidates in (starting, explained):
         if len(candidates) == 1 and found:
             return candidates[0]
-    near = difflib.get_close_matches(entry.text.casefold(), values, n=1)
-    hint = f"did you mean {near[0]!r}?" if near else f"expected {', '.join(values)}"
+    near = nearest(entry.text.casefold(), values)
+    hint = f"did you mean {near!r}?" if near else f"expected {', '.join(values)}"
     raise CellProblem("choice-unknown", f"found {_found(entry)}; {hint}")
 
 
@@ -356,6 +358,10 @@ def parse(field: Field, entry: Entry) -> object:
     """
     if entry.fault is not None:
         raise CellProblem(*entry.fault)
+    longest = LONGEST_TEXT if field.kind is Kind.TEXT else LONGEST_VALUE
+    if isinstance(entry.value, str) and len(entry.value) > longest:
+        message = f"found a text of {len(entry.value):,} characters; expected at most {longest:,}"
+        raise CellProblem("text-too-long", message)
     if field.kind is Kind.CHOICE:
         return choice(entry, field.choices)
     return _PARSERS[field.kind](entry)

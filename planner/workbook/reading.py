@@ -2,16 +2,16 @@
 
 from __future__ import annotations
 
-import difflib
 import hashlib
 import math
 import re
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, replace
 from datetime import date
 from pathlib import Path
 from typing import Any, Final
 
+from planner.checks import nearest, shortened
 from planner.diagnostics import Diagnostic, InputError
 from planner.household import (
     BEST_EACH_YEAR,
@@ -208,6 +208,33 @@ def _whole(value: float) -> int:
     return int(value) if math.isfinite(value) and value == int(value) else value  # type: ignore[return-value]
 
 
+def _and_above(path: str) -> Iterator[str]:
+    """Yield a household path and what holds it: ``people[0].name``, ``people[0]``, ``people``."""
+    while path:
+        yield path
+        path = path[: max(path.rfind("."), path.rfind("["), 0)]
+
+
+class _FromUnread:
+    """Whether a complaint only follows from cells that could not be read."""
+
+    def __init__(self, unread: set[str]) -> None:
+        self.unread = unread
+        self.holding = {part for path in unread for part in _and_above(path)}
+        self.columns = {_INDEX.sub("", path) for path in unread}
+
+    def __call__(self, complaint: Diagnostic) -> bool:
+        if any(path in self.unread for path in _and_above(complaint.where)):
+            return True
+        parent = complaint.where.rpartition(".")[0]
+        for dependency in _DEPENDS_ON.get(complaint.code, ()):
+            whole = parent + dependency if dependency.startswith(".") else dependency
+            table = whole.removesuffix(".name") if whole.endswith(".name") else ""
+            if whole in self.holding or whole in self.columns or table in self.unread:
+                return True
+        return False
+
+
 class _Builder:
     """One pass over the entries: values, problems, and where each household field came from."""
 
@@ -303,16 +330,16 @@ class _Builder:
         if table.per_class is not None and not self.class_names:
             unknown = {}  # the sheet Markets could not be read, so any of them may be an asset class
         for key, text in unknown.items():
-            near = difflib.get_close_matches(key, [k for k, _, _ in wanted], n=1)
-            hint = next((f"; did you mean {label!r}?" for k, label, _ in wanted if near and k == near[0]), "")
-            message = f"the column {text!r} is not read{hint}"
+            near = nearest(key, (k for k, _, _ in wanted))
+            hint = next((f"; did you mean {label!r}?" for k, label, _ in wanted if k == near), "")
+            message = f"the column {shortened(text)!r} is not read{hint}"
             self.say("column-unknown", data.header_cells[key], message, warning=True)
         for key, label, required in wanted:
             if required and (label in self.class_names or data.rows or table.required):
-                near = difflib.get_close_matches(key, list(unknown), n=1)
-                where = data.header_cells[near[0]] if near else data.cell
-                hint = f"; {unknown[near[0]]!r} looks like it" if near else ""
-                self.say("column-missing", where, f"there is no column {label!r}{hint}")
+                near = nearest(key, unknown)
+                where = data.header_cells[near] if near else data.cell
+                hint = f"; {unknown[near]!r} looks like it" if near else ""
+                self.say("column-missing", where, f"there is no column {shortened(label)!r}{hint}")
 
     # ------------------------------------------------------------------ names
 
@@ -368,9 +395,8 @@ class _Builder:
             complaints = tuple(problems(household))
         except InputError as error:
             complaints, household = error.diagnostics, None
-        for complaint in complaints:
-            if not self._follows_from_unread(complaint):
-                self.found.append(self.located(complaint))
+        follows = _FromUnread(self.unread)
+        self.found.extend(self.located(c) for c in complaints if not follows(c))
         if household is None or any(problem.severity == "error" for problem in self.found):
             raise InputError(sorted(self.found, key=lambda problem: problem.severity))
         return household, tuple(self.found)
@@ -383,24 +409,7 @@ class _Builder:
 
     def cell(self, path: str) -> str:
         """Return the cell of a household path, or of the nearest part of it that has one."""
-        while path and path not in self.cells:
-            cut = max(path.rfind("."), path.rfind("["))
-            path = path[: max(cut, 0)]
-        return self.cells.get(path, "workbook")
-
-    def _follows_from_unread(self, complaint: Diagnostic) -> bool:
-        def within(path: str, whole: str) -> bool:
-            return path == whole or path.startswith((f"{whole}.", f"{whole}["))
-
-        if any(within(complaint.where, path) for path in self.unread):
-            return True
-        parent = complaint.where.rpartition(".")[0]
-        for dependency in _DEPENDS_ON.get(complaint.code, ()):
-            whole = parent + dependency if dependency.startswith(".") else dependency
-            for path in self.unread:
-                if within(path, whole) or _INDEX.sub("", path) == whole or whole == f"{path}.name":
-                    return True
-        return False
+        return next((self.cells[part] for part in _and_above(path) if part in self.cells), "workbook")
 
     def _unused(self, parts: dict[str, Any]) -> None:
         if parts["own_tax"] is not None and parts["tax_rules"] != "own" and "tax_rules" not in self.unread:

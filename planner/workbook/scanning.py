@@ -5,10 +5,9 @@ The file is read once into memory and never opened for writing.
 
 from __future__ import annotations
 
-import difflib
 import io
+import re
 import warnings
-import zipfile
 from collections.abc import Iterable, Iterator
 from typing import Final, TypeAlias
 
@@ -18,19 +17,24 @@ from openpyxl.utils import get_column_letter
 from openpyxl.workbook import Workbook
 from openpyxl.worksheet.worksheet import Worksheet
 
+from planner.checks import nearest, shortened
 from planner.diagnostics import Diagnostic, InputError
+from planner.workbook.archive import check_file
 from planner.workbook.data import Entry, Row, TableData, WorkbookData
 from planner.workbook.fields import Sheet, Table, label_keys, normalised
 from planner.workbook.layout import IGNORED_COLUMNS, IGNORED_SHEETS, SHEETS
 
-LARGEST_UNPACKED: Final = 100_000_000  # bytes; a client workbook has well under one million
-
 Grid: TypeAlias = dict[tuple[int, int], Entry]
 
-_OLE_HEADER: Final = b"\xd0\xcf\x11\xe0\xa1\xb1\x1a\xe1"
 _ERROR_TEXTS: Final = frozenset(
     ("#REF!", "#VALUE!", "#NAME?", "#DIV/0!", "#N/A", "#NUM!", "#NULL!", "#SPILL!", "#CALC!")
 )
+LARGEST_NUMBER: Final = 1e300
+MOST_CELLS: Final = 20_000  # filled cells on a sheet; a client workbook has a few hundred
+MOST_ROWS: Final = 500  # of a table; a history of markets has a hundred or two
+
+# Characters that show nothing but steer a terminal or turn the direction of writing.
+_CONTROLS: Final = re.compile("[\x00-\x08\x0b-\x1f\x7f-\x9f\u202a-\u202e\u2066-\u2069]")
 _IGNORED_COLUMN_KEYS: Final = frozenset(normalised(name) for name in IGNORED_COLUMNS)
 
 
@@ -60,50 +64,15 @@ def scan(content: bytes, file_name: str) -> WorkbookData:
             continue
         title = found_sheets[sheet.name]
         grid = _grid(formulas[title], values[title] if values is not None else None)
+        if len(grid) > MOST_CELLS:
+            message = f"{len(grid):,} cells are filled in; expected at most {MOST_CELLS:,}"
+            problems.append(Diagnostic("sheet-too-large", title, message))
+            continue
         scanner = _SheetScanner(sheet, title, grid, _merged_ends(formulas[title]))
         problems.extend(scanner.run())
         forms |= {(sheet.name, key): entry for key, entry in scanner.fields.items()}
         tables |= {(sheet.name, name): table for name, table in scanner.tables.items()}
     return WorkbookData(forms, tables, frozenset(found_sheets), tuple(problems))
-
-
-def check_file(content: bytes, file_name: str) -> None:
-    """Refuse, with the reason, what is not a sound .xlsx file.
-
-    Raises
-    ------
-    InputError
-        Codes ``file-empty``, ``file-encrypted``, ``file-old-format``, ``file-open-document``,
-        ``file-macros``, ``file-not-xlsx``, ``file-damaged`` or ``file-too-large``.
-    """
-
-    def refuse(code: str, message: str) -> InputError:
-        return InputError([Diagnostic(code, file_name, message)])
-
-    if not content:
-        raise refuse("file-empty", "the file is empty")
-    if content.startswith(_OLE_HEADER):
-        if "EncryptedPackage".encode("utf-16-le") in content:
-            raise refuse("file-encrypted", "the workbook has a password; save a copy without one")
-        raise refuse("file-old-format", "this is an old .xls workbook; save it as .xlsx")
-    if not content.startswith(b"PK"):
-        raise refuse("file-not-xlsx", "this is not an .xlsx workbook")
-    try:
-        with zipfile.ZipFile(io.BytesIO(content)) as archive:
-            names = set(archive.namelist())
-            unpacked = sum(info.file_size for info in archive.infolist())
-            kind = archive.read("mimetype")[:100] if "mimetype" in names else b""
-            types = archive.read("[Content_Types].xml") if "[Content_Types].xml" in names else b""
-    except (zipfile.BadZipFile, OSError, ValueError, EOFError, NotImplementedError, RuntimeError) as error:
-        raise refuse("file-damaged", f"the workbook is cut short or damaged ({error})") from None
-    if b"opendocument" in kind:
-        raise refuse("file-open-document", "this is an OpenDocument file; save it as .xlsx")
-    if b"macroEnabled" in types or any(name.endswith("vbaProject.bin") for name in names):
-        raise refuse("file-macros", "this workbook has macros (.xlsm); save it as .xlsx without them")
-    if "xl/workbook.xml" not in names and b"spreadsheetml" not in types:
-        raise refuse("file-not-xlsx", "this is not an .xlsx workbook")
-    if unpacked > LARGEST_UNPACKED:
-        raise refuse("file-too-large", f"the workbook unpacks to {unpacked / 1e6:,.0f} MB")
 
 
 def _load(content: bytes, file_name: str) -> tuple[Workbook, Workbook | None]:
@@ -154,11 +123,13 @@ def _grid(formulas: Worksheet, values: Worksheet | None) -> Grid:
             fault = ("formula-not-computed", "a formula with no stored value; open and save the file once")
         elif shown.data_type == "e" or (isinstance(value, str) and value.strip() in _ERROR_TEXTS):
             fault = ("cell-error", f"the spreadsheet error {value}; repair the formula")
-        elif (
-            value is not None
-            and not isinstance(value, str | int | float | bool)
-            and not hasattr(value, "year")
-        ):
+        elif isinstance(value, str):
+            value = _CONTROLS.sub("", value)
+        elif isinstance(value, int | float) and not isinstance(value, bool):
+            if not abs(value) < LARGEST_NUMBER:  # a NaN is not below it either
+                fault = ("number-not-finite", "a number beyond what a spreadsheet can hold")
+                value = "number"
+        elif value is not None and not isinstance(value, bool) and not hasattr(value, "year"):
             value = str(value)  # times of day and the like: shown in the message, never valid
         is_percentage = "%" in str(cell.number_format) and isinstance(value, int | float)
         grid[cell.row, cell.column] = Entry(place, value, is_percentage, fault)  # type: ignore[arg-type]
@@ -182,16 +153,14 @@ def _match_sheets(workbook: Workbook, problems: list[Diagnostic]) -> dict[str, s
             unknown.append(worksheet.title)
     missing = [sheet.name for sheet in SHEETS if sheet.name not in found]
     for title in unknown:
-        near = difflib.get_close_matches(title.casefold(), [name.casefold() for name in missing], n=1)
-        hint = next(
-            (f"; did you mean {name!r}?" for name in missing if near and name.casefold() == near[0]), ""
-        )
-        message = f"the sheet {title!r} is not read{hint}"
+        near = nearest(title.casefold(), (name.casefold() for name in missing))
+        hint = next((f"; did you mean {name!r}?" for name in missing if name.casefold() == near), "")
+        message = f"the sheet {shortened(title)!r} is not read{hint}"
         problems.append(Diagnostic("sheet-unknown", title, message, "warning"))
     for sheet in SHEETS:
         if sheet.required and sheet.name in missing:
-            near = difflib.get_close_matches(sheet.name.casefold(), [t.casefold() for t in unknown], n=1)
-            hint = next((f"; {t!r} looks like it" for t in unknown if near and t.casefold() == near[0]), "")
+            near = nearest(sheet.name.casefold(), (title.casefold() for title in unknown))
+            hint = next((f"; {title!r} looks like it" for title in unknown if title.casefold() == near), "")
             message = f"the sheet {sheet.name!r} is missing{hint}"
             problems.append(Diagnostic("sheet-missing", sheet.name, message))
     return found
@@ -250,7 +219,7 @@ class _SheetScanner:
                 continue
             others = [normalised(e.text) for n, e in entries.items() if n not in exact.values()]
             rest = [key for key in known if key not in exact]
-            near = sum(bool(difflib.get_close_matches(text, rest, n=1, cutoff=0.8)) for text in others)
+            near = sum(nearest(text, rest, cutoff=0.8) is not None for text in others)
             has_classes = table.per_class is not None and known[0] in exact and bool(others)
             count = len(exact) + 0.5 * (near + has_classes)
             if count > best_count:
@@ -299,16 +268,16 @@ class _SheetScanner:
         unknown = self._unknown_labels(labels, header_rows, taken)
         missing = [field for key, field in self.field_keys.items() if key not in self.fields]
         for entry in unknown:
-            near = difflib.get_close_matches(normalised(entry.text), [f.key for f in missing], n=1)
-            hint = next((f"; did you mean {f.label!r}?" for f in missing if near and f.key == near[0]), "")
-            message = f"the label {entry.text!r} is not read{hint}"
+            near = nearest(normalised(entry.text), (field.key for field in missing))
+            hint = next((f"; did you mean {f.label!r}?" for f in missing if f.key == near), "")
+            message = f"the label {shortened(entry.text)!r} is not read{hint}"
             yield Diagnostic("label-unknown", entry.cell, message, "warning")
         for field in missing:
             if field.required:
                 texts = {normalised(entry.text): entry for entry in unknown}
-                near = difflib.get_close_matches(field.key, list(texts), n=1)
-                hint = f"; {texts[near[0]].text!r} in {texts[near[0]].cell} looks like it" if near else ""
-                place = texts[near[0]].cell if near else self.title
+                near = nearest(field.key, texts)
+                hint = f"; {texts[near].text!r} in {texts[near].cell} looks like it" if near else ""
+                place = texts[near].cell if near else self.title
                 yield Diagnostic("label-missing", place, f"there is no label {field.label!r}{hint}")
 
     def _unknown_labels(
@@ -329,7 +298,7 @@ class _SheetScanner:
                 if any(header < row for header in header_rows) and not known:
                     continue
                 value = entries.get(self._value_column(row, column))
-                is_near = difflib.get_close_matches(normalised(entry.text), known, n=1, cutoff=0.8)
+                is_near = nearest(normalised(entry.text), known, cutoff=0.8) is not None
                 if isinstance(entry.value, str) and (value is not None or is_near):
                     if normalised(entry.text) not in ("field", "label", "value"):
                         unknown.append(entry)
@@ -361,7 +330,7 @@ class _SheetScanner:
                 continue
             key = normalised(entry.text)
             if key in columns:
-                message = f"two columns are headed {entry.text!r}"
+                message = f"two columns are headed {shortened(entry.text)!r}"
                 yield Diagnostic("column-twice", entry.cell, message)
                 continue
             columns[key], headers[key], header_cells[key] = number, entry.text, entry.cell
@@ -372,7 +341,7 @@ class _SheetScanner:
             + [max(self.by_row) + 1]
         )
         key_column = columns.get(table.columns[0].key, first)
-        rows = []
+        rows: list[Row] = []
         for row, entries in self.by_row.items():
             if not header_row < row < end:
                 continue
@@ -388,6 +357,10 @@ class _SheetScanner:
             ]
             if all(entry.is_blank for entry in declared):
                 continue
+            if len(rows) == MOST_ROWS:
+                message = f"the table goes on after {MOST_ROWS} rows, more than can be planned with"
+                yield Diagnostic("table-too-long", f"{self.title}!{get_column_letter(first)}{row}", message)
+                break
             rows.append(Row(row, f"{self.title}!{get_column_letter(key_column)}{row}", picked))
         start = f"{self.title}!{get_column_letter(first)}{header_row}"
         self.tables[table.name] = TableData(start, headers, header_cells, tuple(rows))
