@@ -50,17 +50,17 @@ def long_life(household: Household) -> Household:
     return replace(household, people=tuple(lives_long(person) for person in household.people))
 
 
-def fall_at_the_start(household: Household) -> Household:
-    """Every account, cash kept aside included, loses a fifth today; what it cost stays the same."""
+def fall_at_the_start(household: Household, by: float = FALL_AT_THE_START) -> Household:
+    """Every account, cash aside included, loses a fifth (or `by`, a share) today; its cost stays the same."""
     accounts = tuple(
         replace(
             account,
-            balance=account.balance * (1 - FALL_AT_THE_START),
+            balance=account.balance * (1 - by),
             cost_basis=account.balance if account.cost_basis is None else account.cost_basis,
         )
         for account in household.accounts
     )
-    aside = household.spending.cash_aside * (1 - FALL_AT_THE_START)
+    aside = household.spending.cash_aside * (1 - by)
     return replace(household, accounts=accounts, spending=replace(household.spending, cash_aside=aside))
 
 
