@@ -542,7 +542,7 @@ def main() -> int:
     samples = (root / "sample_clients").glob("*.xlsx")
     mutations = Mutations({path.name: path.read_bytes() for path in samples}, options.seed)
     codes = {0: 0, 2: 0}
-    faults, slowest, planned = 0, 0.0, 0
+    faults, slowest, planned = 0, (0.0, 0), 0
     numbers = range(options.mutations) if options.only is None else [options.only]
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "client.xlsx"
@@ -551,7 +551,7 @@ def main() -> int:
             start = perf_counter()
             run = _check if number % options.check_every == 0 or what == "_huge_sheet" else _read
             code, fault = fault_of(path, content, run)
-            slowest = max(slowest, perf_counter() - start)
+            slowest = max(slowest, (perf_counter() - start, number))
             codes[code] = codes.get(code, 0) + 1
             if not fault and code == 0 and planned < options.plans:
                 planned += 1
@@ -567,7 +567,7 @@ def main() -> int:
     memory = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024
     print(
         f"{sum(codes.values())} mutations: {codes[0]} read, {codes[2]} refused, {faults} faults; slowest "
-        f"{slowest:.1f} s, {memory / 1e6:.0f} MB"
+        f"{slowest[0]:.1f} s (mutation {slowest[1]}), {memory / 1e6:.0f} MB"
     )
     return min(faults, 1)
 

@@ -232,10 +232,12 @@ class _SheetScanner:
         for row, entries in self.by_row.items():
             if row in header_rows:
                 continue
-            for column, entry in entries.items():
-                left = max((c for c in entries if c < column), default=None)
-                if left is not None and (row, left) in found and column == self._value_column(row, left):
-                    continue  # the value of the label to its left, even if it reads like a label
+            left: int | None = None
+            for column, entry in entries.items():  # in the order of the columns
+                before, left = left, column
+                if before is not None and (row, before) in found:
+                    if column == self._value_column(row, before):
+                        continue  # the value of the label to its left, even if it reads like a label
                 for key in label_keys(entry.text):
                     if key in self.field_keys:
                         found[row, column] = key
