@@ -271,6 +271,65 @@ def compare(
 
 
 @app.command()
+def clients(
+    folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="Client workbooks; folders within count.")],
+    output: Annotated[
+        Path, typer.Option("-o", "--output", metavar="OUT", help="Folder for the results; made if missing.")
+    ] = Path("plans"),
+    workers: Annotated[
+        int | None, typer.Option(min=1, help="Processes on this machine (default: one a core).")
+    ] = None,
+    scheduler: Annotated[
+        str | None,
+        typer.Option(metavar="ADDRESS", help="Use a running Dask cluster, such as tcp://10.0.0.5:8786."),
+    ] = None,
+    what_if: Annotated[
+        list[str] | None,
+        typer.Option(metavar="ADDRESS=VALUE", help="A what-if for everybody; repeatable, each by itself."),
+    ] = None,
+    together: Annotated[bool, typer.Option("--together", help="All --what-if as one.")] = False,
+    stress: Annotated[
+        list[str] | None,
+        typer.Option(metavar="NAME", help="A stress for everybody, such as 'fall 30%'; repeatable."),
+    ] = None,
+    last: Annotated[
+        Path | None,
+        typer.Option(metavar="FOLDER", help="Last year's results (default: earlier plans in OUT)."),
+    ] = None,
+    what_ifs: Annotated[
+        bool, typer.Option("--what-ifs/--no-what-ifs", help="Also plan for each what-if (part 8).")
+    ] = True,
+    futures: Futures = None,
+    seed: Seed = None,
+) -> None:
+    """Make everybody's plan, and a list by who needs a call first; run again to go on or to update."""
+    with reporting_errors():
+        from dataclasses import replace
+
+        from planner.clients.command import Options, run_command
+        from planner.clients.display import summary
+
+        options = Options(
+            folder=folder,
+            output=output,
+            workers=workers,
+            scheduler=scheduler,
+            what_if=tuple(what_if or ()),
+            stress=tuple(stress or ()),
+            together=together,
+            last=last,
+        )
+        settings = replace(_settings(futures, seed), what_ifs=what_ifs)
+        result = run_command(options, settings, Console(stderr=True, highlight=False))
+        out = _output()
+        out.print(summary(result))
+        for path in result.files:
+            out.print(f"{escape(str(path))} written", soft_wrap=True)
+        if any(row.state == "failed" for row in result.rows):
+            raise typer.Exit(1)
+
+
+@app.command()
 def tables() -> None:
     """List the life tables and tax rules that come with the program, each with source and year."""
     with reporting_errors():
