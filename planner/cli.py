@@ -7,6 +7,7 @@ imports are local to commands, so that help appears at once.
 from __future__ import annotations
 
 import os
+import signal
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -57,7 +58,10 @@ def reporting_errors() -> Iterator[None]:
     developers.
     """
     console = Console(stderr=True, highlight=False)
+    before = signal.getsignal(signal.SIGTERM)
     try:
+        # Being asked to end is an interrupt, so that no temporary file is left behind.
+        signal.signal(signal.SIGTERM, signal.default_int_handler)
         yield
     except InputError as error:
         for problem in error.diagnostics:
@@ -74,6 +78,10 @@ def reporting_errors() -> Iterator[None]:
     except FileNotFoundError as error:
         console.print(f"[red]error[/] {escape(str(error.filename))}: no such file", soft_wrap=True)
         raise typer.Exit(1) from None
+    except PermissionError as error:
+        why = "permission denied; is it open in another program, or not yours to read or write?"
+        console.print(f"[red]error[/] {escape(str(error.filename))}: {why}", soft_wrap=True)
+        raise typer.Exit(1) from None
     except OSError as error:
         place = f"{error.filename}: " if error.filename else ""
         reason = error.strerror or type(error).__name__
@@ -84,9 +92,20 @@ def reporting_errors() -> Iterator[None]:
     except Exception as error:
         if os.environ.get("PLANNER_TRACEBACK"):
             raise
-        what = f"{type(error).__name__}: {error}"
+        what = f"{type(error).__name__} at {_place_of(error)}"
         console.print(f"[red]error[/] the program failed ({escape(what)}); please report it", soft_wrap=True)
         raise typer.Exit(1) from None
+    finally:
+        signal.signal(signal.SIGTERM, before)
+
+
+def _place_of(error: Exception) -> str:
+    """File and line of this program that an exception comes from; its text may hold client data."""
+    import traceback
+
+    here = str(Path(__file__).parent)
+    frames = [f for f in traceback.extract_tb(error.__traceback__) if f.filename.startswith(here)]
+    return f"{Path(frames[-1].filename).name}:{frames[-1].lineno}" if frames else "an unknown place"
 
 
 @app.command()
@@ -162,7 +181,7 @@ def plan(
 
         from dataclasses import replace
 
-        from planner.files import write_whole
+        from planner.files import write_all
         from planner.plan import make_plan
         from planner.reports.terminal import plan_summary
         from planner.workbook.reading import read_workbook
@@ -192,8 +211,7 @@ def plan(
 
             document = protected(document, secret)
         contents = {pdf: document} | contents
-        for path, content in contents.items():
-            write_whole(path, content)
+        write_all(contents)
         if verbose:
             errors.print(
                 f"{settings.n_paths:,} futures, seed {settings.seed}; simulated over solved value "

@@ -3,30 +3,105 @@
 from __future__ import annotations
 
 import os
+import platform
+import stat
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from pathlib import Path
+
+_PART = ".part"
 
 
 def write_whole(path: Path, content: bytes) -> None:
-    """Write a file so that its name never holds half of it, replacing what was there.
+    """Write one file; see `write_all`."""
+    write_all({path: content})
 
-    The bytes go to a temporary file in the same folder, which then takes the name: after a
-    failure (a full disk, an interrupt) whatever was there before is still there.
+
+def write_all(contents: Mapping[Path, bytes]) -> None:
+    """Write files so that no name ever holds half of one, replacing what was there.
+
+    The bytes of all of them go to temporary files in the same folders, which only then take the
+    names: after a failure (a full disk, an interrupt) whatever was there before is still there,
+    and nothing else. What a process that was killed has left of the same names is cleared away.
+    A name that is a link keeps being one; a device or pipe is written to directly.
 
     Raises
     ------
     OSError
-        The folder does not exist, or the file cannot be written.
+        A folder does not exist, or a file may not or cannot be written; carries its name.
     """
-    part = path.with_name(f".{path.name}.{os.getpid()}.part")
+    staged: list[tuple[Path, Path, Path]] = []
+    direct: list[tuple[Path, bytes]] = []
     try:
-        with part.open("xb") as file:
-            file.write(content)
-            file.flush()
-            os.fsync(file.fileno())
-        part.replace(path)
+        for index, (path, content) in enumerate(contents.items()):
+            with _naming(path):
+                target = path.resolve() if path.is_symlink() else path
+                if target.exists() and not target.is_file():
+                    direct.append((target, content))
+                    continue
+                part = target.with_name(f"{_part_prefix(target)}{_owner()}.{index}{_PART}")
+                _clear_away(target)
+                if target.exists() and not os.access(target, os.W_OK):
+                    raise PermissionError(13, "the file may not be written")
+                staged.append((path, part, target))
+                _write_part(part, target, content)
+        for path, part, target in staged:
+            with _naming(path):
+                part.replace(target)
+        for target, content in direct:
+            with _naming(target):
+                target.write_bytes(content)
+    finally:
+        for _, part, _ in staged:
+            part.unlink(missing_ok=True)
+
+
+def _write_part(part: Path, target: Path, content: bytes) -> None:
+    part.unlink(missing_ok=True)
+    with part.open("xb") as file:
+        if target.exists():  # a plan that only its owner may read stays so
+            part.chmod(stat.S_IMODE(target.stat().st_mode))
+        file.write(content)
+        file.flush()
+        os.fsync(file.fileno())
+
+
+def _part_prefix(target: Path) -> str:
+    return f".{target.name[:40]}."
+
+
+def _owner() -> str:
+    return f"{platform.node() or 'here'}-{os.getpid()}"
+
+
+def _clear_away(target: Path) -> None:
+    """Remove temporary files of this name whose process, on this machine, is gone."""
+    if os.name != "posix":
+        return
+    prefix = f"{_part_prefix(target)}{platform.node() or 'here'}-"
+    for entry in os.scandir(target.parent):
+        if entry.name.startswith(prefix) and entry.name.endswith(_PART):
+            number = entry.name.removeprefix(prefix).partition(".")[0]
+            if number.isdecimal() and not _is_running(int(number)):
+                Path(entry.path).unlink(missing_ok=True)
+
+
+def _is_running(process: int) -> bool:
+    try:
+        os.kill(process, 0)
+    except ProcessLookupError:
+        return False
+    except OSError:
+        return True
+    return True
+
+
+@contextmanager
+def _naming(path: Path) -> Iterator[None]:
+    """Put the name that was asked for into an OSError, not that of the temporary file."""
+    try:
+        yield
     except FileNotFoundError as error:
         raise FileNotFoundError(error.errno, error.strerror, str(path.parent)) from None
     except OSError as error:
         raise type(error)(error.errno, error.strerror, str(path)) from None
-    finally:
-        part.unlink(missing_ok=True)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from io import BytesIO
 from typing import Any, TypeAlias
 
 from openpyxl import Workbook
@@ -17,6 +16,7 @@ from planner import __version__
 from planner.clients.rows import LARGE_CHANGE, LIKELY_CUT, ClientRow, reasons
 from planner.clients.worker import Work
 from planner.diagnostics import Diagnostic
+from planner.workbook.saving import workbook_bytes
 
 Cell: TypeAlias = str | float | int | None
 
@@ -156,9 +156,7 @@ def list_workbook(rows: Sequence[ClientRow], work: Work) -> bytes:
         ],
         problems,
     )
-    buffer = BytesIO()
-    book.save(buffer)
-    return buffer.getvalue()
+    return workbook_bytes(book)
 
 
 def _cells(number: int, row: ClientRow, changes: Sequence[str]) -> list[Cell]:

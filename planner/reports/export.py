@@ -9,7 +9,6 @@ from __future__ import annotations
 import json
 import math
 from collections.abc import Iterable, Sequence
-from io import BytesIO
 from typing import Any, TypeAlias
 
 from openpyxl import Workbook
@@ -21,6 +20,7 @@ from openpyxl.worksheet.worksheet import Worksheet
 from planner.markets import nominal_moments
 from planner.plan import Comparison
 from planner.plan_record import Plan, Range, StrategyResult
+from planner.workbook.saving import workbook_bytes
 
 Json: TypeAlias = dict[str, Any]
 
@@ -281,9 +281,7 @@ def results_workbook(plan: Plan) -> bytes:
     _strategies_sheet(book, plan)
     _percentiles_sheet(book, plan)
     _assumptions_sheet(book, plan)
-    buffer = BytesIO()
-    book.save(buffer)
-    return buffer.getvalue()
+    return workbook_bytes(book, plan_date)
 
 
 def _fill(

@@ -112,7 +112,8 @@ class Table:
     """A header row, then one thing a row; the first column names the row.
 
     `per_class` is the field of the columns named after asset classes, if any. `blank_rows` are
-    written in a blank workbook; `beside` puts the table to the right of the one before it.
+    written in a blank workbook; `beside` puts the table to the right of the one before it. More
+    than `most_rows` are refused.
     """
 
     name: str
@@ -121,6 +122,7 @@ class Table:
     per_class: Field | None = None
     required: bool = False
     blank_rows: int = 8
+    most_rows: int = 500
     beside: bool = False
     note: str = ""
 

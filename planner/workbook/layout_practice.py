@@ -33,6 +33,7 @@ MARKETS = Sheet(
             "asset classes",
             "markets.asset_classes",
             _ASSET_CLASSES_COLUMNS,
+            most_rows=50,
             per_class=optional(
                 "Correlations",
                 Kind.CORRELATION,
@@ -78,6 +79,7 @@ PORTFOLIOS = Sheet(
             "portfolios",
             "portfolios",
             _PORTFOLIOS_COLUMNS,
+            most_rows=100,
             per_class=optional(
                 "Weights",
                 Kind.SHARE,

@@ -31,7 +31,6 @@ _ERROR_TEXTS: Final = frozenset(
 )
 LARGEST_NUMBER: Final = 1e300
 MOST_CELLS: Final = 20_000  # filled cells on a sheet; a client workbook has a few hundred
-MOST_ROWS: Final = 500  # of a table; a history of markets has a hundred or two
 
 # Characters that show nothing but steer a terminal or turn the direction of writing.
 _CONTROLS: Final = re.compile("[\x00-\x08\x0b-\x1f\x7f-\x9f\u202a-\u202e\u2066-\u2069]")
@@ -359,8 +358,8 @@ class _SheetScanner:
             ]
             if all(entry.is_blank for entry in declared):
                 continue
-            if len(rows) == MOST_ROWS:
-                message = f"the table goes on after {MOST_ROWS} rows, more than can be planned with"
+            if len(rows) == table.most_rows:
+                message = f"the table goes on after {len(rows)} rows, more than can be planned with"
                 yield Diagnostic("table-too-long", f"{self.title}!{get_column_letter(first)}{row}", message)
                 break
             rows.append(Row(row, f"{self.title}!{get_column_letter(key_column)}{row}", picked))

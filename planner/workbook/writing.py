@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import io
 import math
 from collections.abc import Mapping, Sequence
 from datetime import date, datetime
@@ -22,6 +21,7 @@ from planner.workbook.data import CellValue
 from planner.workbook.fields import Field, Form, Kind, Sheet, Table
 from planner.workbook.guide import write_guide
 from planner.workbook.layout import GUIDE_SHEET, LISTS_SHEET, SHEETS, shown_choices
+from planner.workbook.saving import workbook_bytes
 from planner.workbook.styles import (
     DARK,
     NOTE_FONT,
@@ -105,9 +105,7 @@ def write_workbook(values: Values, path: str | Path, *, remark: str = "") -> Non
     target = Path(path)
     if target.exists():
         raise PlannerError(f"{target} is there already and was left as it is; choose another name")
-    content = io.BytesIO()
-    make_workbook(values, remark=remark).save(content)
-    write_whole(target, content.getvalue())
+    write_whole(target, workbook_bytes(make_workbook(values, remark=remark)))
 
 
 def make_workbook(values: Values, *, remark: str = "") -> Workbook:
