@@ -193,7 +193,7 @@ def build(household: Household | None = None, n_years: int = 45, **changes: obje
         proof=Proof(9_400 * scale, 0.0086, 0.0004, (("spending", 0.0009), ("tax-deferred", 0.0077))),
         schedule=schedule,
         lookup=_lookup(household, scale),
-        band=NoChangeBand(1_010_000 * scale, 1_120_000 * scale, 84_000 * scale, 96_500 * scale, 0.03),
+        band=NoChangeBand(1_010_000 * scale, 1_120_000 * scale, 84_000 * scale, 96_500 * scale, 0.1),
         strategies=_strategies(schedule, this_year, scale),
         futures=_futures(household, schedule),
         survivors=_survivors(household, scale),

@@ -7,12 +7,12 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import singledispatch
 
-from reportlab.graphics.shapes import Drawing, Line, Polygon, PolyLine, Rect, String
+from reportlab.graphics.shapes import Circle, Drawing, Line, Polygon, PolyLine, Rect, String
 from reportlab.lib.colors import Color, HexColor
 
 from planner.reports.blocks import Chart, CostChart, FanChart, LinesChart, StackChart, TimeAxis
 from planner.reports.figures import MINUS
-from planner.reports.fonts import BOLD, REGULAR, fitted, register, width
+from planner.reports.fonts import BOLD, REGULAR, fitted, register, runs, runs_width, width
 
 ACCENT = HexColor("#0B4F6C")
 INK = HexColor("#1A1A1A")
@@ -135,7 +135,11 @@ def _text(
     font: str = REGULAR,
     color: Color = INK,
 ) -> None:
-    drawing.add(String(x, y, text, fontName=font, fontSize=size, fillColor=color, textAnchor=anchor))
+    wide = runs_width(text, font, size)
+    x -= {"start": 0.0, "middle": wide / 2, "end": wide}[anchor]
+    for source, run in runs(text, font):
+        drawing.add(String(x, y, run, fontName=source, fontSize=size, fillColor=color))
+        x += width(run, source, size)
 
 
 def _line(
@@ -169,11 +173,23 @@ def spread(places: Sequence[float], apart: float, lowest: float, highest: float)
 
 def _end_labels(drawing: Drawing, scale: _Scale, labels: Sequence[tuple[str, float, Color, str]]) -> None:
     """Names right of the plot at the height where each series ends: (text, value, colour, font)."""
-    places = spread([scale.y(v) for _, v, _, _ in labels], 10.5, scale.bottom + 3, scale.top)
-    for (text, _, color, font), y in zip(labels, places, strict=True):
+    ends = [scale.y(value) for _, value, _, _ in labels]
+    places = spread(ends, 10.5, scale.bottom + 3, scale.top)
+    for (text, _, color, font), end, y in zip(labels, ends, places, strict=True):
+        _leader(drawing, scale.right, end, y)
         _text(
-            drawing, scale.right + 6, y - 2.8, fitted(text, font, _LABEL, _RIGHT - 7), font=font, color=color
+            drawing,
+            scale.right + 11,
+            y - 2.8,
+            fitted(text, font, _LABEL, _RIGHT - 12),
+            font=font,
+            color=color,
         )
+
+
+def _leader(drawing: Drawing, x: float, end: float, label: float) -> None:
+    """A hairline from where something ends at the right of the plot to its label."""
+    drawing.add(Line(x + 1.5, end, x + 9, label, strokeColor=SOFT_INK, strokeWidth=0.4))
 
 
 @_draw.register
@@ -229,7 +245,10 @@ def _(chart: LinesChart, available: float) -> Drawing:
 @_draw.register
 def _(chart: StackChart, available: float) -> Drawing:
     totals = [sum(values[t] for _, values in chart.layers) for t in range(len(chart.axis.years))]
-    drawing, scale = _frame(chart.title, chart.unit, chart.axis, totals, available, bars=True)
+    # Head room for names above the bars.
+    drawing, scale = _frame(
+        chart.title, chart.unit, chart.axis, [*totals, 1.12 * max(totals)], available, bars=True
+    )
     n_years = len(chart.axis.years)
     bar = min(0.78 * 2 * scale.inset, 18.0)
     base = [0.0] * n_years
@@ -250,12 +269,62 @@ def _(chart: StackChart, available: float) -> Drawing:
                 )
             )
             base[t] += value
-    for i, ((name, _), color) in enumerate(zip(chart.layers, LAYERS, strict=False)):
-        y = scale.top - 12 - 22 * (len(chart.layers) - 1 - i)
-        drawing.add(Rect(scale.right + 10, y, 8, 8, fillColor=color, strokeColor=SOFT_INK, strokeWidth=0.25))
-        for k, line in enumerate(_two_lines(name, _RIGHT - 24)):
-            _text(drawing, scale.right + 22, y + 0.8 - 9 * k, line)
+    _layer_labels(drawing, scale, chart.layers, totals)
     return drawing
+
+
+def _layer_labels(
+    drawing: Drawing,
+    scale: _Scale,
+    layers: Sequence[tuple[str, tuple[float, ...]]],
+    totals: Sequence[float],
+) -> None:
+    """Each layer's name at the right, on a line to its last bar; above the bars if it ends long before."""
+    last = scale.n_years - 1
+    base = [0.0] * scale.n_years
+    at_right: list[tuple[str, float]] = []
+    above: list[tuple[str, int, float]] = []
+    for name, values in layers:
+        if values[last] > 0.02 * totals[last]:
+            at_right.append((name, scale.y(base[last] + values[last] / 2)))
+        elif any(value > 0 for value in values):
+            # The last year in which the layer is a good part of its largest.
+            year = max(t for t, value in enumerate(values) if value >= 0.5 * max(values))
+            above.append((name, year, scale.y(base[year] + values[year] / 2)))
+        base = [b + v for b, v in zip(base, values, strict=True)]
+    places = spread([y for _, y in at_right], 20.0, scale.bottom + 6, scale.top)
+    for (name, end), y in zip(at_right, places, strict=True):
+        _leader(drawing, scale.right, end, y)
+        lines = _two_lines(name, _RIGHT - 12)
+        for k, line in enumerate(lines):
+            _text(drawing, scale.right + 11, y - 2.8 + 4.5 * (len(lines) - 1) - 9 * k, line)
+    # Names above the bars start at their year, one line higher each, the earliest year lowest.
+    for k, (name, year, middle) in enumerate(sorted(above, key=lambda label: label[1])):
+        text = _above(scale, name, year)
+        y = max(scale.y(total) for total in totals[text.first : text.last + 1]) + 6 + 10.0 * k
+        drawing.add(Line(scale.x(year), middle, scale.x(year), y - 1.5, strokeColor=INK, strokeWidth=0.6))
+        drawing.add(Circle(scale.x(year), middle, 1.3, fillColor=INK, strokeColor=None))
+        _text(drawing, text.x, y, name)
+
+
+@dataclass(frozen=True, slots=True)
+class _Above:
+    """Where a name above the bars starts, and the years that it covers."""
+
+    x: float
+    first: int
+    last: int
+
+
+def _above(scale: _Scale, name: str, year: int) -> _Above:
+    """A name to the right of its year, or to the left where it would run out of the plot."""
+    room = width(name, REGULAR, _LABEL)
+    x = scale.x(year) - 2
+    if x + room > scale.right:
+        x = scale.x(year) + 2 - room
+    step = max(scale.x(1) - scale.x(0), 1e-9)
+    first = max(0, int((x - scale.x(0)) / step))
+    return _Above(x, first, min(scale.n_years - 1, int((x + room - scale.x(0)) / step) + 1))
 
 
 def _two_lines(text: str, available: float) -> tuple[str, ...]:

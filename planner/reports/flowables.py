@@ -3,22 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 from functools import cache, singledispatch
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeAlias
 
 from reportlab.lib.colors import Color
 from reportlab.lib.enums import TA_RIGHT
 from reportlab.lib.styles import ParagraphStyle
 from reportlab.lib.utils import ImageReader
-from reportlab.pdfgen.canvas import Canvas
 from reportlab.platypus import (
     CondPageBreak,
     Flowable,
     Image,
     KeepInFrame,
-    KeepTogether,
     Paragraph,
     Spacer,
 )
@@ -42,12 +39,12 @@ from planner.reports.blocks import (
     Text,
 )
 from planner.reports.charts import ACCENT, INK, RULE, SOFT_INK, draw
-from planner.reports.fonts import BOLD, REGULAR, clean, fitted, markup, plain
+from planner.reports.fonts import BOLD, REGULAR, clean, markup, plain
 from planner.reports.fonts import width as text_width
 from planner.reports.tables import grid
 
 BODY = 11.0
-_FOOTER = 7.5
+_KEPT: TypeAlias = Table | Facts | Bullets | FanChart | LinesChart | StackChart | CostChart | Signatures
 
 
 @cache
@@ -80,41 +77,57 @@ def style(
 
 
 def build_flowables(blocks: Sequence[Block], width: float) -> list[Any]:
-    """Flowables of blocks that follow one another, no heading left alone at the foot of a page."""
+    """Flowables of blocks that follow one another.
+
+    No heading is left alone at the foot of a page; short tables and lists of facts stay whole, and
+    a longer table has a few rows under its header before it breaks.
+    """
+    built = [_flowables(block, width) for block in blocks]
     flowables: list[Any] = []
     for i, block in enumerate(blocks):
-        if isinstance(block, Heading):
-            flowables.append(CondPageBreak(_needs(blocks[i:])))
-        flowables += _flowables(block, width)
+        if isinstance(block, Heading | _KEPT):
+            flowables.append(CondPageBreak(_needs(blocks[i:], built[i:], width)))
+        flowables += built[i]
     return flowables
 
 
-def _needs(blocks: Sequence[Block]) -> float:
-    """Points that a heading needs below it: itself, following headings and the start of what follows."""
+def _needs(blocks: Sequence[Block], built: Sequence[Sequence[Any]], width: float) -> float:
+    """Points that the first of the blocks needs on its page, with what must not leave it."""
     total = 0.0
-    for block in blocks:
+    for i, (block, flowables) in enumerate(zip(blocks, built, strict=True)):
+        after = blocks[i + 1] if i + 1 < len(blocks) else None
+        height = _height(flowables, width)
         if isinstance(block, Heading):
-            total += {1: 34.0, 2: 28.0, 3: 20.0}[block.level]
-        elif isinstance(block, FanChart | LinesChart | StackChart):
-            return total + 215
-        elif isinstance(block, CostChart):
-            return total + 45 + 19 * len(block.bars)
-        elif isinstance(block, Table):
-            # A list to tick off stays on one page; other tables may break after three rows.
-            return total + 45 + min(20 if block.blank else 3, len(block.rows)) * 27
-        elif isinstance(block, Facts):
-            # Short lists of facts stay whole.
-            return total + 24 * min(9, len(block.rows))
-        elif isinstance(block, Signatures):
-            return total + 110
-        elif isinstance(block, Text):
-            # A text between a heading and its table or chart stays with both.
-            total += 8 + 16 * (1 + len(block.text) // 90)
-            if total > 200:
-                return total
+            total += height
+        elif isinstance(block, Text) and height < _SHORT and isinstance(after, _KEPT):
+            # A short text between a heading and its table or chart stays with both.
+            total += height
+        elif isinstance(block, Facts) and isinstance(after, Signatures):
+            total += height
+        elif isinstance(block, FanChart | LinesChart | StackChart | CostChart):
+            note = built[i + 1] if isinstance(after, Text) and after.tone == "note" else []
+            return total + height + _height(note, width)
+        elif isinstance(block, Table | Facts | Bullets):
+            # A list to tick off is kept on one page if it can be.
+            whole = 3 * _SHORT if not (isinstance(block, Table) and block.blank) else 6 * _SHORT
+            return total + (height if height <= whole else _SHORT)
         else:
-            return total + 48
+            return total + (height if isinstance(block, Signatures) else min(height, _START))
     return total
+
+
+# Points: what counts as short, and the least that follows a heading (two lines of text).
+_SHORT = 100.0
+_START = 40.0
+
+
+def _height(flowables: Sequence[Any], width: float) -> float:
+    """Height of flowables one under another; the space between two is the larger wish."""
+    total = below = 0.0
+    for flowable in flowables:
+        total += max(below, flowable.getSpaceBefore()) + flowable.wrap(width, 1e6)[1]
+        below = flowable.getSpaceAfter()
+    return total + below
 
 
 def one_page(blocks: Sequence[Block], width: float, height: float, logo: str) -> KeepInFrame:
@@ -128,14 +141,14 @@ def one_page(blocks: Sequence[Block], width: float, height: float, logo: str) ->
 
 
 def _logo(path: str) -> Image | None:
-    """The firm's logo, at most 36 points high; None where there is no such file."""
-    if not path or not Path(path).is_file():
+    """The firm's logo, at most 36 points high; None where reading the workbook found none to use."""
+    if not path or not Path(path).is_absolute() or not Path(path).is_file():
         return None
     try:
         wide, tall = ImageReader(path).getSize()
         scale = min(36.0 / tall, 160.0 / wide)
         return Image(path, wide * scale, tall * scale, hAlign="RIGHT")
-    except Exception as error:  # reportlab raises many kinds for a file that is no picture
+    except Exception as error:  # changed since the workbook was read; reportlab raises many kinds
         raise PlannerError(f"the logo file {path!r} is no picture that can be drawn: {error}") from error
 
 
@@ -232,10 +245,10 @@ def _(block: Bullets, width: float) -> list[Any]:
 def _(block: KeyFigures, width: float) -> list[Any]:
     """One row of boxes, the first wider and larger than the others."""
     n = len(block.figures)
-    shares = {1: (1.0,), 2: (0.56, 0.44), 3: (0.44, 0.26, 0.3)}[n]
+    shares = {1: (1.0,), 2: (0.56, 0.44), 3: (0.42, 0.28, 0.3)}[n]
     cells = []
     for i, figure in enumerate(block.figures):
-        large = 30.0 if i == 0 else 19.0
+        large = 34.0 if i == 0 else 23.0
         room = shares[i] * width - 16
         size = large
         while size > 11 and text_width(plain(figure.value), BOLD, size) > room:
@@ -246,7 +259,7 @@ def _(block: KeyFigures, width: float) -> list[Any]:
             fontName=BOLD,
             fontSize=size,
             leading=size + 8,
-            spaceBefore=30 - size,
+            spaceBefore=34 - size,
             textColor=ACCENT if i == 0 else INK,
         )
         cells.append(
@@ -381,9 +394,7 @@ def _(block: Signatures, width: float) -> list[Any]:
             ("LINEABOVE", (2, 0), (2, -1), 0.6, INK),
         ],
     )
-    return [
-        KeepTogether([Spacer(1, 8), Paragraph(markup(block.statement), style(BODY)), Spacer(1, 30), table])
-    ]
+    return [Spacer(1, 8), Paragraph(markup(block.statement), style(BODY)), Spacer(1, 30), table]
 
 
 class _ContentsFlowable(Flowable):  # type: ignore[misc]
@@ -407,108 +418,4 @@ def _(block: Contents, width: float) -> list[Any]:
     return [_ContentsFlowable(width)]
 
 
-@dataclass(frozen=True, slots=True)
-class Furniture:
-    """What stands on every page. `parts` are the numbered titles for the contents."""
-
-    margin: float
-    first_line: tuple[str, ...]
-    second_line: str
-    draft: str
-    parts: tuple[tuple[int, str], ...]
-
-
-def _shortened(texts: Sequence[str], available: float) -> list[str]:
-    """Texts that together fit on a footer line: the longest are cut, the others stay whole."""
-    widths = [text_width(plain(t), REGULAR, _FOOTER) for t in texts]
-    limit = max(widths)
-    while sum(min(w, limit) for w in widths) > available:
-        limit -= 1
-    return [fitted(t, REGULAR, _FOOTER, limit) for t in texts]
-
-
-class PageCanvas(Canvas):  # type: ignore[misc]
-    """A canvas that draws footers and contents last, when the number of pages is known."""
-
-    def __init__(self, furniture: Furniture, *args: object, **kwargs: object) -> None:
-        super().__init__(*args, **kwargs)
-        self._furniture = furniture
-        self._pages: list[dict[str, Any]] = []
-        self._part_pages: dict[int, int] = {}
-        self._contents: tuple[int, float, float, float, float] | None = None
-        self._headings: list[tuple[int, str, str, int, float]] = []
-
-    def note_heading(self, title: str, level: int, part: int | None, top: float) -> None:
-        """Remember a heading: a bookmark can only be set when its page is written."""
-        key = f"place{len(self._headings)}" if part is None else f"part{part}"
-        self._headings.append((self._pageNumber, key, title, level, top))
-        if part is not None:
-            self._part_pages[part] = self._pageNumber
-
-    def note_contents(self, x: float, y: float, width: float, height: float) -> None:
-        """Remember where the contents belong."""
-        self._contents = (self._pageNumber, x, y, width, height)
-
-    def showPage(self) -> None:
-        """Keep the page back until `save`."""
-        self._pages.append(dict(self.__dict__))
-        self._startPage()
-
-    def save(self) -> None:
-        """Add footers and contents to every page, then write."""
-        pages, parts, contents, headings = self._pages, self._part_pages, self._contents, self._headings
-        for state in pages:
-            self.__dict__.update(state)
-            self._footer(len(pages))
-            for page, key, title, level, top in headings:
-                if page == self._pageNumber:
-                    self.bookmarkHorizontal(key, 0, top)
-                    self.addOutlineEntry(title, key, level, closed=level == 0)
-            if contents is not None and contents[0] == self._pageNumber:
-                self._draw_contents(contents[1:], parts)
-            super().showPage()
-        super().save()
-
-    def _footer(self, n_pages: int) -> None:
-        furniture = self._furniture
-        left, right = furniture.margin, self._pagesize[0] - furniture.margin
-        self.setStrokeColor(RULE)
-        self.setLineWidth(0.5)
-        self.line(left, 44, right, 44)
-        self.setFillColor(SOFT_INK)
-        self.setFont(REGULAR, _FOOTER)
-        page = f"page {self._pageNumber} of {n_pages}"
-        self.drawRightString(right, 33, page)
-        line = "  ·  ".join(_shortened(furniture.first_line, right - left - 110))
-        self.drawString(left, 33, line)
-        self.drawString(left, 23, fitted(furniture.second_line, REGULAR, _FOOTER, right - left))
-        if furniture.draft:
-            top = self._pagesize[1]
-            self.setFillColor(INK)
-            self.rect(left, top - 36, right - left, 17, stroke=0, fill=1)
-            self.setFillGray(1)
-            self.setFont(BOLD, 10)
-            self.drawCentredString((left + right) / 2, top - 31, furniture.draft)
-
-    def _draw_contents(self, place: tuple[float, float, float, float], parts: dict[int, int]) -> None:
-        """Two columns of part, title and page, each a link."""
-        x, y, width, height = place
-        self.setFont(BOLD, 9)
-        self.setFillColor(SOFT_INK)
-        self.drawString(x, y + height - 12, "In this plan, and its page")
-        column = width / 2
-        per_column = (len(self._furniture.parts) + 1) // 2
-        for i, (part, title) in enumerate(self._furniture.parts):
-            left = x + column * (i // per_column)
-            line = y + height - 25 - 12 * (i % per_column)
-            self.setFont(REGULAR, 9)
-            self.setFillColor(INK)
-            self.drawString(left, line, f"{part}")
-            self.drawString(left + 16, line, fitted(title, REGULAR, 9, column - 56))
-            self.drawRightString(left + column - 24, line, f"{parts.get(part, 0)}")
-            self.linkRect(
-                "", f"part{part}", (left, line - 3, left + column - 20, line + 9), relative=0, thickness=0
-            )
-
-
-__all__ = ["BODY", "Furniture", "PageCanvas", "build_flowables", "one_page", "style"]
+__all__ = ["BODY", "build_flowables", "one_page", "style"]

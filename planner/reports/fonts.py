@@ -17,6 +17,7 @@ from xml.sax.saxutils import escape
 
 from reportlab.pdfbase import pdfmetrics
 from reportlab.pdfbase.ttfonts import TTFont
+from reportlab.pdfgen.canvas import Canvas
 
 REGULAR = "NotoSans-Regular"
 BOLD = "NotoSans-Bold"
@@ -73,10 +74,37 @@ def markup(text: str) -> str:
             drawn = run if font == FALLBACK else MISSING * len(run)
             pieces.append(f'<font name="{FALLBACK}">{escape(drawn)}</font>')
     joined = "".join(pieces).replace("\t", " ").replace("\r\n", "\n")
+    joined = re.sub(r"(?<=\d) (?=%)", "\N{NO-BREAK SPACE}", joined)
     # A paragraph collapses runs of spaces; wording that must be as typed keeps them.
     return re.sub("  +", lambda found: "\N{NO-BREAK SPACE}" * (len(found[0]) - 1) + " ", joined).replace(
         "\n", "<br/>"
     )
+
+
+def runs(text: str, font: str) -> tuple[tuple[str, str], ...]:
+    """A single line as (font, characters): what `font` lacks is drawn in the fallback."""
+    line = clean(text).replace("\n", " ").replace("\t", " ")
+    found = []
+    for source, characters in groupby(line, _font_for):
+        run = "".join(characters)
+        if source == REGULAR:
+            found.append((font, run))
+        else:
+            found.append((FALLBACK, run if source == FALLBACK else MISSING * len(run)))
+    return tuple(found)
+
+
+def runs_width(text: str, font: str, size: float) -> float:
+    """Width in points of a line as `draw_runs` draws it."""
+    return sum(width(run, source, size) for source, run in runs(text, font))
+
+
+def draw_runs(canvas: Canvas, x: float, y: float, text: str, font: str, size: float) -> None:
+    """Draw a single line from `x`, each character in a font that has it."""
+    for source, run in runs(text, font):
+        canvas.setFont(source, size)
+        canvas.drawString(x, y, run)
+        x += width(run, source, size)
 
 
 def plain(text: str) -> str:
@@ -92,9 +120,9 @@ def width(text: str, font: str, size: float) -> float:
 
 def fitted(text: str, font: str, size: float, available: float) -> str:
     """A line of text, cut with an ellipsis where it is wider than `available` points."""
-    line = plain(text)
-    if width(line, font, size) <= available:
+    line = text
+    if runs_width(line, font, size) <= available:
         return line
-    while line and width(line + "…", font, size) > available:
+    while line and runs_width(line + "…", font, size) > available:
         line = line[:-1]
     return line.rstrip() + "…"

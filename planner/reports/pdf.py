@@ -18,16 +18,19 @@ from reportlab.platypus import BaseDocTemplate, Frame, NextPageTemplate, PageBre
 
 from planner.files import write_whole
 from planner.plan_record import Plan
-from planner.reports.blocks import Block, NewPage, OnePage, Table
+from planner.reports.blocks import Block, NewPage, OnePage, Table, Text
 from planner.reports.figures import day_words, language, uses_letter_paper
-from planner.reports.flowables import Furniture, PageCanvas, build_flowables, one_page
+from planner.reports.flowables import build_flowables, one_page
 from planner.reports.fonts import register
+from planner.reports.furniture import Furniture, PageCanvas
 from planner.reports.sections import SECTIONS, report_blocks
+from planner.reports.tables import pages
 from planner.reports.wording import DRAFT
 
 MARGIN = 51.0  # 18 mm
 _BOTTOM = 56.0
 _TOP = 48.0
+_WIDE_NOTE = 40.0  # room under a wide table for its note
 
 
 def render_pdf(plan: Plan) -> bytes:
@@ -92,7 +95,7 @@ def _template(name: str, size: tuple[float, float]) -> PageTemplate:
 def _story(plan: Plan, blocks: Iterable[Block], tall: tuple[float, float]) -> list[Any]:
     """Flowables of all blocks, with page turns for wide tables."""
     width, height = tall[0] - 2 * MARGIN, tall[1] - _BOTTOM - _TOP
-    wide_width = tall[1] - 2 * MARGIN
+    wide_width, wide_height = tall[1] - 2 * MARGIN, tall[0] - _BOTTOM - _TOP
     logo = plan.household.practice.logo_file
     story: list[Any] = []
     fresh = True
@@ -117,8 +120,9 @@ def _story(plan: Plan, blocks: Iterable[Block], tall: tuple[float, float]) -> li
                 fresh = True
         elif isinstance(block, Table) and block.wide:
             flush()
-            story += [NextPageTemplate("wide"), PageBreak()]
-            story += build_flowables([block], wide_width)
+            for part in pages(block, wide_width, wide_height - _WIDE_NOTE):
+                story += [NextPageTemplate("wide"), PageBreak(), part]
+            story += build_flowables([Text(block.note, "note")] if block.note else [], wide_width)
             story += [NextPageTemplate("tall"), PageBreak()]
             fresh = True
         else:
@@ -142,7 +146,11 @@ def _furniture(plan: Plan) -> Furniture:
             made_by,
         ),
         second_line=(
-            f"Workbook fingerprint {sources.workbook_sha256[:16]} · program version {sources.version}"
+            f"Workbook {sources.workbook_sha256[:16]}",
+            f"version {sources.version}",
+            f"life tables {', '.join(sources.life_tables)}",
+            f"tax {sources.tax_rules}",
+            f"seed {sources.seed}",
         ),
         draft=DRAFT if practice.is_draft else "",
         parts=tuple((section.number, section.title) for section in SECTIONS[1:]),

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from pathlib import Path
 from typing import Final
 
 from planner.household import Household, Portfolio
@@ -152,7 +151,7 @@ def _sources(plan: Plan) -> tuple[tuple[str, str], ...]:
     sources, household = plan.sources, plan.household
     rows = [
         ("Life tables", "; ".join(sources.life_tables) or "none named"),
-        ("Tax", sources.tax_rules or tax_rules_words(household)),
+        ("Tax", tax_rules_words(household) if household.tax_rules == "own" else sources.tax_rules),
     ]
     if household.extra_income_tax_rate is None and household.tax_rules != "none":
         rows.append(("State or regional income tax", "none was entered, so none is counted"))
@@ -178,11 +177,8 @@ def _notes(plan: Plan) -> tuple[Block, ...]:
 
 
 def _warnings(plan: Plan) -> tuple[Block, ...]:
-    """The workbook's warnings, each with its cell, and a logo that was not found."""
+    """The workbook's warnings, each with its cell."""
     items = [f"{w.where}: {w.message} ({w.code})" for w in plan.warnings]
-    logo = plan.household.practice.logo_file
-    if logo and not Path(logo).is_file():
-        items.append(f"The logo file '{logo}' was not found, so it is not shown.")
     if not items:
         return (Heading("Warnings"), Text("Reading the workbook gave no warnings."))
     return (

@@ -3,21 +3,24 @@
 from __future__ import annotations
 
 import math
-from typing import Final
+from collections.abc import Sequence
+from typing import Final, TypeAlias
 
 from planner.plan_record import AccountInstruction, Plan
 from planner.reports.blocks import Block, Column, Heading, NewPage, Table, Text
-from planner.reports.figures import Money, add_up, day_words, one_year_after, percent, rounded
+from planner.reports.figures import Money, add_up, day_words, one_year_after, percent
+from planner.reports.month_money import year_by_month
 from planner.reports.wording import CANNOT_BE_UNDONE, CHECK_TAX
 from planner.reports.year_money import (
+    account_trades,
     investment_moves,
-    stays_invested,
     tax_year_end,
     unknown_holdings,
     year_money,
 )
 
 LEFT: Final = "left"
+Row: TypeAlias = tuple[str, ...]
 
 
 def instructions(plan: Plan) -> tuple[Block, ...]:
@@ -35,6 +38,7 @@ def instructions(plan: Plan) -> tuple[Block, ...]:
         *_trades(plan),
         Heading("To do"),
         _to_do(plan),
+        *_months(plan),
     )
 
 
@@ -79,6 +83,9 @@ def _accounts(plan: Plan) -> Block:
         ]
     if now.convert >= 0.5:
         columns.append(Column("Move to tax-free"))
+    withheld = tax_withheld(plan)
+    if withheld:
+        columns.append(Column("Tax to withhold"))
     rows = []
     for account in now.accounts:
         owner = "both" if account.owner == "joint" else account.owner
@@ -95,6 +102,8 @@ def _accounts(plan: Plan) -> Block:
             ]
         if now.convert >= 0.5:
             row.append(money.exact_cell(account.convert))
+        if withheld:
+            row.append(money.exact_cell(withheld.get(account.account, 0)))
         rows.append(tuple(row))
     note = f"In {money.unit}, before tax, for the whole year."
     if any(a.type == "taxable" and a.sell >= 0.5 for a in now.accounts):
@@ -108,13 +117,41 @@ def _accounts(plan: Plan) -> Block:
             f"{day_words(tax_year_end(plan.household), plan.household.currency)}; what you take out "
             "counts towards it."
         )
+    if withheld:
+        note += (
+            " 'Tax to withhold': the year's income tax shared over what leaves the tax-deferred accounts. "
+            "If a provider withholds another amount, set aside or expect back the difference."
+        )
     return Table(tuple(columns), tuple(rows), note)
+
+
+def tax_withheld(plan: Plan) -> dict[str, int]:
+    """The year's income tax shared over what leaves tax-deferred accounts, in whole units.
+
+    In proportion to withdrawal and move; no more than is paid out. Empty where nothing leaves one
+    or no tax is due; what it does not cover is set aside by the client.
+    """
+    deferred = [a for a in plan.this_year.accounts if a.type == "tax-deferred" and a.withdraw >= 1]
+    paid = [a.withdraw for a in deferred]
+    tax = min(year_money(plan).tax, math.floor(sum(paid)))
+    if tax < 1 or not deferred:
+        return {}
+    shares = add_up([tax * amount / sum(paid) for amount in paid], tax)
+    return {a.account: share for a, share in zip(deferred, shares, strict=True)}
 
 
 def _tax(plan: Plan) -> tuple[Block, ...]:
     money = Money(plan.household.currency)
     now = plan.this_year
-    text = f"Set aside {money.exact(year_money(plan).tax)} for income tax."
+    tax, withheld = year_money(plan).tax, sum(tax_withheld(plan).values())
+    if withheld == 0:
+        text = f"Set aside {money.exact(tax)} for income tax."
+    else:
+        rest = "all of it can be withheld"
+        if tax > withheld:
+            yours = money.exact(tax - withheld)
+            rest = f"{money.exact(withheld)} can be withheld, {yours} is for you to set aside"
+        text = f"Income tax this year is about {money.exact(tax)}; {rest}."
     text += (
         f" The next {money.exact(100)} taken from a tax-deferred account would be taxed at about "
         f"{percent(now.tax_rate_on_next)}"
@@ -138,12 +175,61 @@ def _conversions(plan: Plan) -> tuple[Block, ...]:
     )
 
 
+def _months(plan: Plan) -> tuple[Block, ...]:
+    """The year's money in twelve payments."""
+    money = Money(plan.household.currency)
+    year = year_by_month(plan)
+    has_income = any(m.income for m in year.months)
+    has_kept = any(m.kept for m in year.months)
+    if not year.accounts and not has_income:
+        return ()
+    columns = [Column("From", LEFT)]
+    columns += [Column("Pensions and other income")] if has_income else []
+    columns += [Column(name, group="From the accounts, before tax") for name in year.accounts]
+    columns += [Column("Tax")] if any(m.tax for m in year.months) else []
+    columns += [Column("Added to savings")] if has_kept else []
+    columns.append(Column("To spend, after tax"))
+
+    def cells(label: str, income: int, withdrawals: Sequence[int], tax: int, kept: int, spending: int) -> Row:
+        row = [label]
+        row += [money.exact_cell(income)] if has_income else []
+        row += [money.exact_cell(amount) for amount in withdrawals]
+        row += [money.exact_cell(-tax)] if any(m.tax for m in year.months) else []
+        row += [money.exact_cell(-kept)] if has_kept else []
+        return (*row, money.exact_cell(spending))
+
+    rows = [
+        cells(day_words(m.day, plan.household.currency), m.income, m.withdrawals, m.tax, m.kept, m.spending)
+        for m in year.months
+    ]
+    each = zip(*(m.withdrawals for m in year.months), strict=True)
+    rows.append(
+        cells(
+            "The whole year",
+            sum(m.income for m in year.months),
+            [sum(column) for column in each],
+            sum(m.tax for m in year.months),
+            sum(m.kept for m in year.months),
+            sum(m.spending for m in year.months),
+        )
+    )
+    note = (
+        f"In {money.unit}. Income is shown as a twelfth a month, whenever it is paid. You may also take the "
+        "money in fewer, larger sums."
+    )
+    if year.brought_forward:
+        note += (
+            " Early payments are larger so that the least amount leaves its account in time; keep what you "
+            "do not need for the later months."
+        )
+    table = Table(tuple(columns), tuple(rows), note, strong=(len(rows) - 1,))
+    return (Heading("Month by month, if you want it so"), table)
+
+
 def _trades(plan: Plan) -> tuple[Block, ...]:
-    """By asset class over all accounts whose present portfolio is known."""
+    """Buy and sell by account and asset class, from the portfolio held now to this year's."""
     household, now = plan.household, plan.this_year
     money = Money(household.currency)
-    portfolios = {p.name: p for p in household.portfolios}
-    known = [a for a in now.accounts if a.held_now in portfolios]
     heading = Heading("Investments")
     unknown = unknown_holdings(plan)
     ask: tuple[Block, ...] = ()
@@ -151,59 +237,50 @@ def _trades(plan: Plan) -> tuple[Block, ...]:
         ask = (
             Text(
                 f"The workbook does not say what is held in {'; '.join(unknown)}. Compare it with "
-                f"'{now.portfolio}' "
-                "before you trade."
+                f"'{now.portfolio}' before you trade."
             ),
         )
-    if not investment_moves(plan) or now.portfolio not in portfolios:
+    trades = account_trades(plan)
+    if not trades:
         done = "" if unknown else " No trades are needed."
         return (heading, Text(f"Portfolio for this year: '{now.portfolio}'.{done}"), *ask)
-    classes = [c.name for c in household.markets.asset_classes]
-    before = [0.0] * len(classes)
-    for account in known:
-        weights = portfolios[str(account.held_now)].weights
-        stays = stays_invested(account)
-        before = [b + w * stays for b, w in zip(before, weights, strict=True)]
-    total = sum(before)
-    target = portfolios[now.portfolio].weights
-    whole = rounded(total)
-    from_units = add_up(before, whole) if before else ()
-    after_values = [w * total for w in target]
-    after_units = add_up(after_values, whole)
-    rows = [
-        (
-            name,
-            money.exact_cell(held),
-            money.exact_cell(wanted),
-            _buy_or_sell(wanted - held, money),
-        )
-        for name, held, wanted in zip(classes, from_units, after_units, strict=True)
-    ]
-    rows.append(("Together", money.exact_cell(whole), money.exact_cell(whole), ""))
-    table = Table(
-        (
-            Column("Asset class", LEFT),
-            Column(f"Now ({money.unit})"),
-            Column(f"In '{now.portfolio}'"),
-            Column("Trade"),
-        ),
-        tuple(rows),
-        "Money that stays invested after this year's withdrawals, over all accounts whose holdings are "
-        "known. Trade "
-        "inside tax-deferred and tax-free accounts first: there a sale is not taxed.",
-        strong=(len(rows) - 1,),
-    )
-    lines = tuple(
+    moves = tuple(
         Text(f"Move about {money.about(amount)} from '{source}' to '{to}'.")
         for source, to, amount in investment_moves(plan)
     )
-    return (heading, *lines, table, *ask)
-
-
-def _buy_or_sell(change: int, money: Money) -> str:
-    if change == 0:
-        return "none"
-    return f"{'buy' if change > 0 else 'sell'} {money.exact_cell(abs(change))}"
+    if not moves:
+        moves = (Text(f"Stay in '{now.portfolio}'; sell only what is paid out."),)
+    moved = ", or moved to tax-free and invested there" if now.convert >= 0.5 else ""
+    classes = household.markets.asset_classes
+    columns = (
+        Column("Account", LEFT),
+        Column("Held now", LEFT),
+        *(Column(c.name, group="Buy, or sell (–)") for c in classes),
+        Column("Leaves the account"),
+    )
+    rows = [
+        (
+            trade.account,
+            trade.held_now,
+            *(money.exact_cell(amount) for amount in trade.amounts),
+            money.exact_cell(trade.leaves),
+        )
+        for trade in trades
+    ]
+    if len(trades) > 1:
+        sums = [sum(column) for column in zip(*(trade.amounts for trade in trades), strict=True)]
+        leaves = sum(trade.leaves for trade in trades)
+        rows.append(("Together", "", *(money.exact_cell(v) for v in sums), money.exact_cell(leaves)))
+    table = Table(
+        columns,
+        tuple(rows),
+        f"In {money.unit}. After these trades what stays in each account is in '{now.portfolio}'. A line's "
+        f"sales less its purchases are what leaves the account this year: paid out{moved}. In a taxable "
+        "account a sale may be taxed; its gain is in this year's tax only as "
+        "far as the money is paid out, so ask your tax preparer before larger changes there.",
+        strong=(len(rows) - 1,) if len(trades) > 1 else (),
+    )
+    return (heading, *moves, table, *ask)
 
 
 def _to_do(plan: Plan) -> Table:
@@ -236,9 +313,13 @@ def _to_do(plan: Plan) -> Table:
         tasks.append((f"Move {money.exact(now.convert)} from tax-deferred to tax-free", adviser, year_end))
     tax = year_money(plan).tax
     if tax >= 1:
-        tasks.append(
-            (f"Set aside {money.exact(tax)} for tax and have it checked", "You, tax preparer", year_end)
-        )
+        withheld = sum(tax_withheld(plan).values())
+        if withheld:
+            text = f"Ask the providers to withhold {money.exact(withheld)} of income tax"
+            tasks.append((text, adviser, "with the first payment"))
+        if tax > withheld:
+            tasks.append((f"Set aside {money.exact(tax - withheld)} for tax", "You", year_end))
+        tasks.append((f"Have the tax of {money.exact(tax)} checked", "You, tax preparer", year_end))
     if household.spending.cash_aside:
         tasks.append((f"Keep {money.exact(household.spending.cash_aside)} in cash", "You", "all year"))
     tasks.append(("Next review: bring the balances of all accounts", "You, " + adviser, review))

@@ -21,7 +21,6 @@ def method_and_information(plan: Plan) -> tuple[Block, ...]:
         Heading("Important information"),
         *(block for title, text in IMPORTANT_INFORMATION for block in (Heading(title, 3), Text(text))),
         *_local(plan),
-        *required_wording(plan),
         Heading("Who made this plan"),
         Facts(_who(plan)),
         Signatures(
@@ -35,8 +34,8 @@ def method_and_information(plan: Plan) -> tuple[Block, ...]:
 
 
 def _local(plan: Plan) -> tuple[Block, ...]:
-    caution = plan.household.practice.local_caution
-    return (Heading("Local rules", 3), Text(caution, "required")) if caution.strip() else ()
+    wording = required_wording(plan)
+    return (Heading("Local rules", 3), *wording) if wording else ()
 
 
 def _who(plan: Plan) -> tuple[tuple[str, str], ...]:
@@ -49,4 +48,6 @@ def _who(plan: Plan) -> tuple[tuple[str, str], ...]:
         ("Plan date", day_words(plan.household.plan_date, plan.household.currency)),
         ("Workbook", f"{sources.workbook_name}, fingerprint {sources.workbook_sha256[:16]}"),
         ("Program version", sources.version),
+        ("Tables", "; ".join((*sources.life_tables, sources.tax_rules))),
+        ("Random seed", f"{sources.seed}, {sources.n_paths:,} futures"),
     )

@@ -125,6 +125,16 @@ def _survivors(plan: Plan) -> tuple[Block, ...]:
         Column("Bills"),
         Column("Bills paid by lifelong income"),
     )
+    now = plan.this_year
+    both = (
+        "Both of you, this year",
+        money.about_cell(now.income),
+        money.about_cell(now.income),
+        money.about_cell(now.tax),
+        money.about_cell(now.spending),
+        money.about_cell(plan.household.spending.essential),
+        percent(plan.bills_covered_now, 0),
+    )
     rows = tuple(
         (
             s.survivor,
@@ -142,7 +152,7 @@ def _survivors(plan: Plan) -> tuple[Block, ...]:
         "before tax; spending "
         "and bills are after tax. A survivor is taxed as a single person. The assumptions are in part 10."
     )
-    return (Heading("If one of you died now"), Table(columns, rows, note))
+    return (Heading("If one of you died now"), Table(columns, (both, *rows), note, strong=(0,)))
 
 
 def _long_lives(plan: Plan) -> tuple[Block, ...]:
@@ -169,8 +179,16 @@ def _long_lives(plan: Plan) -> tuple[Block, ...]:
         "start of the "
         "year. You may live longer than any table says."
     )
+    names = [p.name for p in household.people] if household.is_couple else ["you"]
+    series = [(name, tuple(100 * row.chance_alive[i] for row in rows)) for i, name in enumerate(names)]
+    if household.is_couple:
+        series.append(("at least one", tuple(100 * row.chance_alive[-1] for row in rows)))
+    chart = LinesChart(
+        "Still alive", "of 100 like you, at the start of the year", time_axis(plan), tuple(series)
+    )
     return (
         Heading("How long you might live"),
+        chart,
         Table(tuple(columns), tuple(cells), note),
         *required_wording(plan),
     )

@@ -5,7 +5,7 @@ from __future__ import annotations
 from planner.plan_record import LookupRow, Plan, StrategyResult
 from planner.reports.blocks import Block, Column, Heading, NewPage, Table, Text
 from planner.reports.figures import Money, day_words, of_futures, one_year_after, percent
-from planner.reports.section_year import band_sentence, required_wording
+from planner.reports.section_year import band_sentence, planned_next_year, required_wording
 from planner.reports.wording import SAVINGS_MEAN, SURVIVOR_ACCOUNTS, WHAT_A_REVIEW_DOES, futures_tested
 
 
@@ -62,7 +62,11 @@ def _tables(plan: Plan) -> tuple[Block, ...]:
             for status_rows in by_status.values():
                 cells += [money.about_cell(status_rows[i].spending), status_rows[i].portfolio]
             rows.append(tuple(cells))
-        return (Table(tuple(columns), tuple(rows), note),)
+        expected = planned_next_year(plan)
+        strong = () if expected is None else (_place(expected, by_status),)
+        if strong:
+            note += " In bold: the line nearest to what we expect."
+        return (Table(tuple(columns), tuple(rows), note, strong),)
     blocks: list[Block] = []
     for status, status_rows in by_status.items():
         blocks.append(Heading(status_words(plan, status), 3))
@@ -78,6 +82,10 @@ def _tables(plan: Plan) -> tuple[Block, ...]:
     return (*blocks, Text(note, "note"))
 
 
+def _place(row: LookupRow, by_status: dict[str, list[LookupRow]]) -> int:
+    return next(i for i, other in enumerate(by_status[row.status]) if other is row)
+
+
 def band_strategy(plan: Plan) -> StrategyResult | None:
     """The plan with the no-change band kept, where it was simulated."""
     return next((s for s in plan.strategies if "band" in s.key), None)
@@ -89,7 +97,8 @@ def _band(plan: Plan) -> tuple[Block, ...]:
     text = (
         "Small ups and downs need no change: keep spending what was planned while the table says an "
         "amount within "
-        f"{percent(band.tolerance)} of it. {band_sentence(plan)} All after tax, in today's money."
+        f"{percent(band.tolerance)} of it. {band_sentence(plan)} All after tax, in today's money. "
+        "Outside the band, spend what the table says from then on, and measure the next band from there."
     )
     result = band_strategy(plan)
     if result is None:

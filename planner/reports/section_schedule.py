@@ -9,6 +9,7 @@ from planner.reports.wording import ASSUMPTIONS, LOW_MIDDLE_HIGH, SAVINGS_MEAN, 
 
 # Charts stop where it is this unlikely that anyone is alive: what follows is about almost nobody.
 _CHART_UNTIL = 0.02
+_TABLE_UNTIL = 0.001
 
 
 def chart_length(plan: Plan) -> int:
@@ -125,7 +126,13 @@ def _table(plan: Plan, money: Money) -> Table:
         columns.append(Column("The least to take"))
     columns += [Column(t, group="Savings at the start of the year") for t in ("Low", "Middle", "High")]
     note = f"In {money.unit} a year, today's money. How to read it stands before the table."
-    return Table(tuple(columns), tuple(_row(plan, row, money) for row in plan.schedule), note, wide=True)
+    shown = [row for row in plan.schedule if not row.chance_alive or row.chance_alive[-1] >= _TABLE_UNTIL]
+    if len(shown) < len(plan.schedule):
+        note += (
+            f" Left out: the years after {shown[-1].year}, which fewer than 1 in 1,000 live to see; the "
+            "results files have them."
+        )
+    return Table(tuple(columns), tuple(_row(plan, row, money) for row in shown), note, wide=True)
 
 
 def _short_layers(plan: Plan) -> list[str]:

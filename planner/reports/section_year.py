@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from planner.plan_record import Plan, StrategyResult
+from planner.plan_record import LookupRow, Plan, StrategyResult
 from planner.reports.blocks import (
     BarRow,
     Block,
@@ -16,7 +16,6 @@ from planner.reports.blocks import (
 )
 from planner.reports.figures import Money, day_words, listed, of_futures, one_year_after, percent
 from planner.reports.wording import (
-    ASSUMPTIONS,
     CALL_US,
     CALL_US_COUPLE,
     CALL_US_SINGLE,
@@ -26,11 +25,15 @@ from planner.reports.wording import (
     as_long_as_alive,
 )
 from planner.reports.year_money import (
+    grouped_incomes,
     investment_moves,
     tax_year_end,
     unknown_holdings,
     year_money,
 )
+
+# Characters of required wording that page one has room for; more stands right behind it.
+_MOST_WORDING = 900
 
 
 def your_year(plan: Plan) -> tuple[Block, ...]:
@@ -52,6 +55,8 @@ def your_year(plan: Plan) -> tuple[Block, ...]:
         blocks.append(
             Text(f"Draft: the adviser still has to write {listed([m.lower() for m in missing])}.", "strong")
         )
+    wording = required_wording(plan)
+    behind = sum(len(text.text) for text in wording) > _MOST_WORDING
     first_reason = CALL_US_COUPLE if household.is_couple else CALL_US_SINGLE
     blocks += [
         _figures(plan),
@@ -66,24 +71,29 @@ def your_year(plan: Plan) -> tuple[Block, ...]:
                     _next_review(plan),
                     _bills(plan),
                     _safety(plan),
-                    ("Call us first if", "; ".join((first_reason, *CALL_US)) + "."),
+                    ("Call us first if", "\n".join(f"– {reason}" for reason in (first_reason, *CALL_US))),
                 )
                 if row[1]
             )
         ),
-        *required_wording(plan),
+        *(() if behind else wording),
         Text(
-            f"{ESTIMATES} All amounts are in today's money. {ASSUMPTIONS} Part 6 explains 'futures tested'.",
-            "body",
+            f"{ESTIMATES} All amounts are in today's money. The {plan.sources.n_paths:,} futures are courses "
+            "of markets and lives, drawn at random. Part 6 says more of them; part 10 has the assumptions."
+            + (" The wording required by your adviser's firm stands on the next page." if behind else "")
         ),
     ]
-    return (OnePage(tuple(blocks)),)
+    return (OnePage(tuple(blocks)), *(wording if behind else ()))
 
 
-def required_wording(plan: Plan) -> tuple[Block, ...]:
-    """The firm's required wording, as typed, for every place that states a probability."""
-    wording = plan.household.practice.required_wording
-    return (Text(wording, "required"),) if wording.strip() else ()
+def required_wording(plan: Plan) -> tuple[Text, ...]:
+    """The firm's local caution and required wording, as typed: for every place with a probability."""
+    practice = plan.household.practice
+    return tuple(
+        Text(words, "required")
+        for words in (practice.local_caution, practice.required_wording)
+        if words.strip()
+    )
 
 
 def bills_sentence(plan: Plan, result: StrategyResult) -> str:
@@ -133,10 +143,11 @@ def _sources(plan: Plan) -> MoneyBars:
     """Where the money comes from, added up."""
     money = Money(plan.household.currency)
     rounded = year_money(plan)
-    longest = max((line.amount for line in rounded.lines), default=0)
+    lines = grouped_incomes(rounded.lines)
+    longest = max((line.amount for line in lines), default=0)
     rows = [
-        BarRow(line.label, money.exact(line.amount), max(0.0, line.amount / longest) if longest > 0 else 0.0)
-        for line in rounded.lines
+        BarRow(line.label, money.exact(line.amount), line.amount / longest if line.amount > 0 else None)
+        for line in lines
     ]
     rows.append(BarRow("Comes in, before tax", money.exact(rounded.coming_in), None, total=True))
     rows.append(BarRow("less income tax", money.exact(-rounded.tax), None))
@@ -180,29 +191,46 @@ def _next_review(plan: Plan) -> tuple[str, str]:
     return ("Next review", f"{when}. {band_sentence(plan)}")
 
 
+def planned_next_year(plan: Plan) -> LookupRow | None:
+    """Row of the look-up for the present household that is nearest to the savings expected then."""
+    if len(plan.schedule) < 2 or not plan.lookup:
+        return None
+    rows = [row for row in plan.lookup if row.status == plan.lookup[0].status]
+    expected = plan.schedule[1].balance.p50
+    return min(rows, key=lambda row: abs(row.balance - expected))
+
+
 def band_sentence(plan: Plan) -> str:
     """Savings at the next review between which nothing changes, and a month's spending outside."""
     money = Money(plan.household.currency)
-    band = plan.band
+    band, now = plan.band, plan.this_year.spending
     if band.high <= 0:
         return "There will be no savings to read your spending from; it follows from your incomes."
-    above = f"a tenth above it, about {money.monthly(band.spending_above)}"
+    planned = planned_next_year(plan)
+    changes = planned is not None and abs(planned.spending - now) > band.tolerance * abs(now)
+    opening = f"Spend about {money.monthly(planned.spending)} a month" if planned and changes else "No change"
     if band.low <= 0:
-        return f"No change while your savings are then below {money.about(band.high)}; {above} a month."
-    return (
-        f"No change while your savings are then between {money.about(band.low)} and "
-        f"{money.about(band.high)}. A tenth "
-        f"below that, expect to spend about {money.monthly(band.spending_below)} a month; {above}."
-    )
+        text = f"{opening} if your savings are then below {money.about(band.high)}."
+    else:
+        text = (
+            f"{opening} if your savings are then between {money.about(band.low)} and "
+            f"{money.about(band.high)}. If they are lower, spend less: about "
+            f"{money.monthly(band.spending_below)} a month at {money.about(0.9 * band.low)}."
+        )
+    if band.spending_above > (planned.spending if planned and changes else now):
+        text += (
+            f" If they are higher, you can spend more: about {money.monthly(band.spending_above)} a month "
+            f"at {money.about(1.1 * band.high)}."
+        )
+    return text
 
 
 def _bills(plan: Plan) -> tuple[str, str]:
-    text = f"Lifelong pensions, after tax, pay {percent(plan.bills_covered_now, 0)} of your bills now"
+    text = f"Pensions for life pay {percent(plan.bills_covered_now, 0)} of your bills now, after tax."
     if plan.survivors:
-        text += "; " + listed(
-            [f"{percent(s.bills_covered, 0)} for {s.survivor} alone" for s in plan.survivors]
-        )
-    return ("Your bills", f"{text}. {'Savings pay the rest.' if plan.bills_covered_now < 1 else ''}".rstrip())
+        alone = [f"{percent(s.bills_covered, 0)} for {s.survivor}" for s in plan.survivors]
+        text += f" If one of you were left alone: {listed(alone)}."
+    return ("Your bills", f"{text}{' Savings pay the rest.' if plan.bills_covered_now < 1 else ''}")
 
 
 def _safety(plan: Plan) -> tuple[str, str]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from functools import cache
 from typing import Any
@@ -53,19 +54,49 @@ class _Box(Flowable):  # type: ignore[misc]
 
 def grid(table: Table, available: float) -> Grid:
     """The table as a reportlab Table exactly `available` points wide, in the largest type that fits."""
+    size = _type_size(table, available)
+    return _part(table, column_widths(table, available, size), size, range(len(table.rows)))
+
+
+def pages(table: Table, available: float, height: float) -> list[Grid]:
+    """A table of one-line rows as one `grid` a page, of about the same number of rows each.
+
+    All parts have the same columns and type; `height` is what a page holds, in points.
+    """
+    size = _type_size(table, available)
+    widths = column_widths(table, available, size)
+    n_rows = len(table.rows)
+    whole = _part(table, widths, size, range(n_rows))
+    if n_rows == 0 or whole.wrap(available, height)[1] <= height:
+        return [whole]
+    header = _part(table, widths, size, range(0)).wrap(available, height)[1]
+    row = (whole.wrap(available, height)[1] - header) / n_rows
+    n_pages = math.ceil(n_rows / max(1, math.floor((height - header) / row)))
+    each = math.ceil(n_rows / n_pages)
+    return [
+        _part(table, widths, size, range(start, min(start + each, n_rows)))
+        for start in range(0, n_rows, each)
+    ]
+
+
+def _type_size(table: Table, available: float) -> float:
     size = LARGEST
     while size > SMALLEST and sum(_least_widths(table, size)) > available:
         size -= 0.25
-    widths = column_widths(table, available, size)
+    return size
+
+
+def _part(table: Table, widths: Sequence[float], size: float, rows: range) -> Grid:
+    """Header and some of the rows."""
     header = _header(table.columns, size)
-    body = [_row(table, i, size) for i in range(len(table.rows))]
+    strong = tuple(i - rows.start for i in table.strong if i in rows)
     return Grid(
-        [*header, *body],
-        colWidths=widths,
+        [*header, *(_row(table, i, size) for i in rows)],
+        colWidths=list(widths),
         hAlign="LEFT",
         repeatRows=len(header),
         splitInRow=1,
-        style=_commands(table, len(header), size),
+        style=_commands(table, len(header), size, strong),
     )
 
 
@@ -73,7 +104,8 @@ def _least_widths(table: Table, size: float) -> list[float]:
     """Least width of each column: its figures unbroken, its longest word (very long ones may break)."""
     widths = []
     for j, column in enumerate(table.columns):
-        least = max((width(w, BOLD, size) for w in plain(column.title).split()), default=0.0)
+        words = plain(column.title).split()
+        least = max((min(width(w, BOLD, size), 12 * size) for w in words), default=0.0)
         for i, row in enumerate(table.rows):
             font = BOLD if i in table.strong else REGULAR
             if column.align == "right":
@@ -154,7 +186,7 @@ def _spans(columns: Sequence[Column]) -> list[tuple[int, int]]:
     return spans
 
 
-def _commands(table: Table, n_header: int, size: float) -> list[tuple[Any, ...]]:
+def _commands(table: Table, n_header: int, size: float, strong: Sequence[int]) -> list[tuple[Any, ...]]:
     tall = 4.5 if table.blank else 0.2 * size
     commands: list[tuple[Any, ...]] = [
         ("FONT", (0, n_header), (-1, -1), REGULAR, size, 1.25 * size),
@@ -176,7 +208,7 @@ def _commands(table: Table, n_header: int, size: float) -> list[tuple[Any, ...]]
     if n_header == 2:
         for first, last in _spans(table.columns):
             commands += [("SPAN", (first, 0), (last, 0)), ("LINEBELOW", (first, 0), (last, 0), 0.4, SOFT_INK)]
-    for i in table.strong:
+    for i in strong:
         row = n_header + i
         commands += [
             ("FONT", (0, row), (-1, row), BOLD, size, 1.25 * size),

@@ -75,6 +75,19 @@ def year_money(plan: Plan) -> YearMoney:
     return YearMoney(lines, sum(amounts), -tax, -kept, spending)
 
 
+MOST_LINES = 8
+"""More sources than this are too many to take in at a glance."""
+
+
+def grouped_incomes(lines: tuple[MoneyLine, ...]) -> tuple[MoneyLine, ...]:
+    """Sources for page one: where there are many, the incomes as one line, the accounts each."""
+    incomes = [line for line in lines if line.account is None]
+    if len(lines) <= MOST_LINES or len(incomes) < 2:
+        return lines
+    together = MoneyLine("Pensions, work and other income", sum(line.amount for line in incomes))
+    return (together, *(line for line in lines if line.account is not None))
+
+
 def account_label(account: AccountInstruction) -> str:
     """Name and kind of an account, for people."""
     return f"{account.account} ({account.type})"
@@ -96,6 +109,37 @@ def investment_moves(plan: Plan) -> tuple[tuple[str, str, float], ...]:
     )
 
 
+@dataclass(frozen=True, slots=True)
+class AccountTrade:
+    """Whole units to buy (+) or sell (-) of each asset class in one account.
+
+    sum(amounts) = -leaves; afterwards what stays is in this year's portfolio.
+    """
+
+    account: str
+    held_now: str
+    amounts: tuple[int, ...]
+    leaves: int
+
+
+def account_trades(plan: Plan) -> tuple[AccountTrade, ...]:
+    """Trades of every account whose present portfolio is known and in which something moves."""
+    portfolios = {p.name: p.weights for p in plan.household.portfolios}
+    target = portfolios.get(plan.this_year.portfolio)
+    trades = []
+    for account in plan.this_year.accounts:
+        held = portfolios.get(account.held_now or "")
+        if target is None or held is None:
+            continue
+        stays = stays_invested(account)
+        changes = [w * stays - h * account.balance for w, h in zip(target, held, strict=True)]
+        leaves = rounded(account.balance - stays)
+        amounts = add_up(changes, -leaves)
+        if any(amounts):
+            trades.append(AccountTrade(account.account, str(account.held_now), amounts, leaves))
+    return tuple(trades)
+
+
 def stays_invested(account: AccountInstruction) -> float:
     """Balance less what is sold, withdrawn and moved out this year."""
     return max(0.0, account.balance - max(account.sell, account.withdraw) - account.convert)
@@ -109,9 +153,10 @@ def unknown_holdings(plan: Plan) -> tuple[str, ...]:
 
 
 def tax_year_end(household: Household) -> date:
-    """Last day to act in the tax year of the plan date: 5 April under UK rules, else 31 December."""
+    """Last day to act in the tax year of the plan date: 5 April for UK clients, else 31 December."""
     day = household.plan_date
-    if household.tax_rules.lower().startswith("uk"):
+    own_in_pounds = household.tax_rules.lower() in ("own", "none") and household.currency == "GBP"
+    if household.tax_rules.lower().startswith("uk") or own_in_pounds:
         end = date(day.year, 4, 5)
         return end if day <= end else date(day.year + 1, 4, 5)
     return date(day.year, 12, 31)

@@ -44,6 +44,7 @@ from planner.workbook.data import Entry, Row, TableData, WorkbookData
 from planner.workbook.fields import Field, Form, Kind, Table, normalised
 from planner.workbook.layout import IGNORED_COLUMNS, SHEETS
 from planner.workbook.layout_client import IN_THE_PLAN
+from planner.workbook.logo import with_logo
 from planner.workbook.parsing import CellProblem, parse
 from planner.workbook.scanning import scan
 
@@ -126,7 +127,9 @@ def read_workbook(path: str | Path) -> ReadWorkbook:
         The file cannot be read.
     """
     file = Path(path)
-    return read_content(file.read_bytes(), file.name)
+    read = read_content(file.read_bytes(), file.name)
+    household, warnings = with_logo(read.household, read.data, file.parent)
+    return replace(read, household=household, warnings=(*read.warnings, *warnings))
 
 
 def read_content(content: bytes, name: str) -> ReadWorkbook:
