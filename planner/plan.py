@@ -453,13 +453,19 @@ def _plan_costs(problem: Problem, paths: Paths, fees: np.ndarray) -> float:
     return float((fees[paths.portfolio] * invested * paths.alive).sum(axis=1).mean())
 
 
+def _named(rules: TaxRules) -> tuple[str, ...]:
+    """Title, publisher, source and law year of tax rules; what the adviser's own rules lack is left out."""
+    year = f"law year {rules.year}" if rules.year else ""
+    return tuple(part for part in (rules.title, rules.publisher, rules.source, year) if part)
+
+
 def _notes(
     household: Household, problem: Problem, rules: TaxRules, facts: FirstYear, choice: Choice, tax: float
 ) -> tuple[str, ...]:
     """Return notes on sources and conventions that a reader of the figures needs."""
     planning = float(problem.tax[0][0](choice.withdraw + choice.convert))
     notes = [
-        f"Tax rules {rules.name}: {rules.title}; {rules.publisher}; {rules.source}; law year {rules.year}.",
+        f"Tax rules {rules.name}: {'; '.join(_named(rules))}.",
         *(f"Tax rules {rules.name}: {note}" for note in rules.notes),
     ]
     for table in {

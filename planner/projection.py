@@ -307,7 +307,7 @@ def example_futures(
             ExampleFuture(
                 name=name,
                 description=(
-                    f"savings grew {decade:.1%} a year above prices over the first {first} years"
+                    f"{_growth_words(decade)} over the first {first} years"
                     f"; {round(100 * share)} of 100 futures with long lives did worse"
                 ),
                 years=tuple(first_year + t for t in range(n)),
@@ -319,6 +319,12 @@ def example_futures(
             )
         )
     return tuple(futures)
+
+
+def _growth_words(rate: float) -> str:
+    if rate < 0:
+        return f"investments lost {-rate:.1%} a year against prices"
+    return f"investments grew {rate:.1%} a year above prices"
 
 
 def _gross(problem: Problem, paths: Paths, scenarios: Scenarios, t: int, path: IntArray) -> FloatArray:
