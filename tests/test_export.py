@@ -2,8 +2,10 @@
 
 import json
 import math
+import zipfile
 from dataclasses import replace
 from io import BytesIO
+from xml.etree import ElementTree
 
 import openpyxl
 import pytest
@@ -126,3 +128,53 @@ def test_who_is_alive_is_said_by_name():
     names = [person.name for person in PLAN.household.people]
     assert status_in_words("both", PLAN) == " and ".join(names)
     assert status_in_words("second", PLAN) == names[1]
+
+
+def test_headers_can_be_filtered_and_wrapped_text_has_room():
+    book = opened()
+    for sheet in book:
+        assert sheet.auto_filter.ref == f"A2:{sheet.cell(sheet.max_row, sheet.max_column).coordinate}"
+        for row in sheet.iter_rows(min_row=3):
+            longest = max((len(cell.value) for cell in row if isinstance(cell.value, str)), default=0)
+            if longest > 60:
+                assert sheet.row_dimensions[row[0].row].height >= 30
+
+
+def test_control_characters_in_names_do_not_stop_the_workbook():
+    portfolio = replace(couple().portfolios[0], name="Care\x0bful\x00")
+    household = replace(couple(), portfolios=(portfolio, *couple().portfolios[1:]))
+    names = [row[0].value for row in opened(replace(PLAN, household=household))["Assumptions"].rows]
+    assert "Portfolio Careful" in names
+
+
+def test_assumptions_hold_what_the_figures_rest_on():
+    rows = {row[0].value: row[1].value for row in opened()["Assumptions"].iter_rows(min_row=3)}
+    household = PLAN.household
+    for asset in household.markets.asset_classes:
+        assert f"Asset class {asset.name}" in rows
+    assert rows["Correlation of Bonds and World shares"] == household.markets.correlations[1][0]
+    assert rows["Adviser fee a year"] == "0.50%"
+    assert rows["How close to the best possible, money"] == PLAN.proof.gap_money
+    assert rows["Workbook SHA-256"] == PLAN.sources.workbook_sha256
+
+
+def test_every_part_of_the_file_is_declared_and_every_declared_part_is_there():
+    """What spreadsheet programs check before they offer to repair a file."""
+    with zipfile.ZipFile(BytesIO(results_workbook(PLAN))) as archive:
+        parts = set(archive.namelist())
+        trees = {name: ElementTree.fromstring(archive.read(name)) for name in parts}
+    types = trees["[Content_Types].xml"]
+    declared = {node.get("PartName", "").lstrip("/") for node in types if node.tag.endswith("Override")}
+    assert declared <= parts
+    assert {name for name in parts if not name.endswith(".rels")} - {"[Content_Types].xml"} <= declared
+    for name in parts:
+        if name.endswith(".rels"):
+            folder = name.replace("_rels/", "").rpartition("/")[0]
+            for node in trees[name]:
+                target = node.get("Target", "")
+                place = target.lstrip("/") if target.startswith("/") else f"{folder}/{target}".lstrip("/")
+                assert place in parts, (name, target)
+    if "xl/sharedStrings.xml" not in parts:
+        assert not any(
+            cell.get("t") == "s" for tree in trees.values() for cell in tree.iter() if cell.tag.endswith("}c")
+        )

@@ -1,13 +1,17 @@
 """What the report says, as blocks."""
 
 import dataclasses
+import itertools
 from dataclasses import replace
 
 import plan_builder
 import pytest
+from reportlab.graphics.shapes import String
 
 from planner.plan_record import NoChangeBand
-from planner.reports.blocks import Heading, OnePage, Table, Text
+from planner.reports.blocks import Heading, OnePage, StackChart, Table, Text
+from planner.reports.charts import LAYERS, draw
+from planner.reports.section_year import band_sentence
 from planner.reports.sections import SECTIONS, report_blocks
 from planner.reports.wording import DRAFT, IMPORTANT_INFORMATION, LIMITS
 
@@ -58,6 +62,7 @@ def test_required_wording_stands_as_typed_in_every_part_with_a_probability(numbe
     plan = plan_builder.build(plan_builder.couple(practice=practice))
     blocks = list(flat(SECTIONS[number - 1].blocks(plan)))
     assert Text(wording, "required") in blocks
+    assert Text(plan_builder.PRACTICE.local_caution, "required") in blocks
 
 
 def test_every_chance_says_of_how_many_futures_and_what_happens_in_the_rest():
@@ -137,3 +142,28 @@ def test_projections_say_the_money_they_are_in():
             assert "today's" in block.unit or block.unit.startswith("of 100")
         if isinstance(block, Table) and block.wide:
             assert "today's money" in block.note
+
+
+def test_wording_too_long_for_page_one_stands_right_behind_it():
+    wording = "Words that the firm must print. " * 40
+    practice = replace(plan_builder.PRACTICE, required_wording=wording)
+    page, *behind = SECTIONS[0].blocks(plan_builder.build(plan_builder.couple(practice=practice)))
+    assert Text(wording, "required") in behind
+    assert "stands on the next page" in "\n".join(words(page))
+
+
+def test_the_review_says_what_to_spend_where_next_year_is_planned_to_differ():
+    """Planned spending that leaves the band by itself is no 'no change'."""
+    plan = plan_builder.build()
+    halved = tuple(replace(row, spending=row.spending / 2) for row in plan.lookup)
+    assert "Spend about $" in band_sentence(replace(plan, lookup=halved))
+    assert band_sentence(plan).startswith("No change if your savings are then between")
+
+
+def test_layers_of_grey_stay_apart_and_are_labelled_directly():
+    """Luminance (ITU-R BT.601: 0.299 R + 0.587 G + 0.114 B) of neighbouring layers, 0 to 1."""
+    grey = [0.299 * c.red + 0.587 * c.green + 0.114 * c.blue for c in LAYERS]
+    assert min(b - a for a, b in itertools.pairwise(grey)) > 0.15
+    chart = next(b for b in flat(report_blocks(plan_builder.build())) if isinstance(b, StackChart))
+    labels = [s.text for s in draw(chart, 490.0).contents if isinstance(s, String)]
+    assert {"From taxable", "From tax-deferred", "From tax-free"} <= set(labels)

@@ -12,6 +12,7 @@ from collections.abc import Iterable, Sequence
 from typing import Any, TypeAlias
 
 from openpyxl import Workbook
+from openpyxl.cell.cell import ILLEGAL_CHARACTERS_RE
 from openpyxl.styles import Alignment, Font, PatternFill
 from openpyxl.utils import get_column_letter
 from openpyxl.worksheet.properties import PageSetupProperties
@@ -251,6 +252,7 @@ def json_text(data: Json) -> str:
 
 _MONEY, _SHARE, _PLAIN = "#,##0", "0.0%", "General"
 _HEADER = PatternFill("solid", start_color="E7EAEE")
+_WIDEST = 60
 _FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
 Cell: TypeAlias = str | float | int | None
@@ -295,20 +297,30 @@ def _fill(
         cell.font, cell.fill = Font(bold=True), _HEADER
         cell.alignment = Alignment(wrap_text=True, vertical="top")
         sheet.column_dimensions[get_column_letter(number)].width = 14
+    sheet.row_dimensions[2].height = 45
     for row_number, row in enumerate(rows, 3):
         for number, (value, (_, number_format)) in enumerate(zip(row, columns, strict=True), 1):
+            if isinstance(value, str):
+                value = ILLEGAL_CHARACTERS_RE.sub("", value)
             cell = sheet.cell(row_number, number, value)
             if isinstance(value, str):
                 cell.data_type = "s"  # never a formula, whatever it starts with
                 # Quoted text stays text when the cell is edited or the sheet saved as CSV.
                 cell.quotePrefix = value.startswith(_FORMULA_STARTS)
-                cell.alignment = Alignment(wrap_text=len(value) > 40, vertical="top")
+                cell.alignment = Alignment(wrap_text=len(value) > _WIDEST - 4, vertical="top")
                 letter = get_column_letter(number)
                 width = sheet.column_dimensions[letter].width
-                sheet.column_dimensions[letter].width = max(width, min(len(value) + 2, 60))
+                sheet.column_dimensions[letter].width = max(width, min(len(value) + 2, _WIDEST))
+                # Programs that open the file do not all make room for wrapped text.
+                lines = sum(math.ceil(max(len(line), 1) / _WIDEST) for line in value.split("\n"))
+                if lines > 1:
+                    height = sheet.row_dimensions[row_number].height or 0
+                    sheet.row_dimensions[row_number].height = max(height, 15 * lines)
             else:
                 cell.number_format = number_format
+                cell.alignment = Alignment(vertical="top")
     sheet.freeze_panes = "B3"
+    sheet.auto_filter.ref = f"A2:{get_column_letter(len(columns))}{sheet.max_row}"
     sheet.page_setup.orientation = "landscape"
     sheet.page_setup.fitToWidth, sheet.page_setup.fitToHeight = 1, 0
     sheet.sheet_properties.pageSetUpPr = PageSetupProperties(fitToPage=True)
@@ -450,16 +462,37 @@ def _assumptions_sheet(book: Workbook, plan: Plan) -> None:
         ("Client", household.client_name),
         ("Plan date", household.plan_date.isoformat()),
         ("Currency", household.currency),
+        ("Essential spending a year, after tax", household.spending.essential),
+        ("A survivor needs", _percent(household.spending.survivor_share)),
+        ("Cash kept aside", household.spending.cash_aside),
         ("Inflation a year", _percent(household.markets.inflation)),
         ("Risk aversion", household.preferences.risk_aversion),
         ("How much worse cutting bills is", household.preferences.shortfall_weight),
         ("Preference for earlier spending", _percent(household.preferences.time_preference)),
         ("Wish to leave", household.preferences.wish_to_leave),
+        ("Heirs' tax rate", _percent(household.preferences.heirs_tax_rate)),
+        ("Adviser fee a year", _percent(household.adviser_fee)),
+    ]
+    rows += _value_rows(plan)
+    rows += [
+        (
+            f"Asset class {asset.name}",
+            f"nominal mean {_percent(asset.expected_return)} a year, deviation "
+            f"{_percent(asset.standard_deviation)}, income paid out {_percent(asset.income_yield)}",
+        )
+        for asset in household.markets.asset_classes
+    ]
+    names = [asset.name for asset in household.markets.asset_classes]
+    rows += [
+        (f"Correlation of {names[i]} and {names[j]}", household.markets.correlations[i][j])
+        for i in range(len(names))
+        for j in range(i)
     ]
     rows += [
         (
             f"Portfolio {portfolio.name}",
-            f"mean {_percent(float(mean))} a year after costs, deviation {_percent(float(deviation))}",
+            f"nominal mean {_percent(float(mean))} a year after costs, deviation "
+            f"{_percent(float(deviation))}, its cost {_percent(portfolio.yearly_cost)}",
         )
         for portfolio, mean, deviation in zip(household.portfolios, means, deviations, strict=True)
     ]
@@ -480,6 +513,21 @@ def _assumptions_sheet(book: Workbook, plan: Plan) -> None:
     ]
     note = f"{_in_todays_money(plan)}. These are estimates under the assumptions below, not promises."
     _fill(book, "Assumptions", note, [("What", _PLAIN), ("Value", _PLAIN)], rows)
+
+
+def _value_rows(plan: Plan) -> list[tuple[str, Cell]]:
+    """How good the plan is: its worth, the bound, and the check of simulation against solution."""
+    rows: list[tuple[str, Cell]] = []
+    if plan.level_spending is not None:
+        rows.append(("Worth a steady income of", money(plan.level_spending)))
+    if plan.proof is not None:
+        rows += [
+            ("How close to the best possible, money", money(plan.proof.gap_money)),
+            ("How close to the best possible, share of savings", f"{plan.proof.gap_share:.4%}"),
+            ("Standard error of that share", f"{plan.proof.gap_standard_error:.4%}"),
+        ]
+    rows.append(("Simulated over solved value (about 1)", share(plan.value_share_simulated)))
+    return rows
 
 
 def _percent(value: float) -> str:
