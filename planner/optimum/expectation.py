@@ -31,11 +31,14 @@ class GrowthMaps:
         that a cubic cannot overshoot beside a cliff. -1 beyond the last node, where none is kept.
     estate : ndarray of shape (n_portfolios, n1, n2, n3)
         E[v(estate)] of the grown nodes; zeros where no legacy is wished.
+    estate2 : ndarray of the same shape
+        Its slope along tax-deferred.
     """
 
     maps: tuple[FloatArray, FloatArray, FloatArray]
     cells: tuple[IntArray, IntArray, IntArray]
     estate: FloatArray
+    estate2: FloatArray
 
 
 def growth_maps(problem: Problem, grids: Sequence[LogGrid], contribution: FloatArray) -> GrowthMaps:
@@ -60,15 +63,34 @@ def growth_maps(problem: Problem, grids: Sequence[LogGrid], contribution: FloatA
         )
         value = problem.estate.value(passed).reshape(n_portfolios, n_nodes, *shape)
         estate = np.tensordot(problem.node_weights, value, axes=(0, 1))
+        marginal = problem.estate.marginal(passed).reshape(n_portfolios, n_nodes, *shape)
+        weighted = (1 - problem.heirs_tax_rate) * problem.node_weights * problem.gross
+        estate2 = np.einsum("pq,pqijk->pijk", weighted, marginal)
     else:
-        estate = np.zeros((n_portfolios, *shape))
-    return GrowthMaps((maps[0], maps[1], maps[2]), (cells[0], cells[1], cells[2]), estate)
+        estate = estate2 = np.zeros((n_portfolios, *shape))
+    return GrowthMaps((maps[0], maps[1], maps[2]), (cells[0], cells[1], cells[2]), estate, estate2)
 
 
 def expected_value(
-    problem: Problem, growth: GrowthMaps, level: FloatArray, smooth: SpendingUtility
-) -> FloatArray:
-    """E[g(C(y R_p))] for each portfolio: (n1, n2, n3) levels -> (n_portfolios, n1, n2, n3)."""
+    problem: Problem, growth: GrowthMaps, level: FloatArray, slope2: FloatArray, smooth: SpendingUtility
+) -> tuple[FloatArray, FloatArray]:
+    """E[g(C(y R_p))] and its slope along tax-deferred, E[g'(C) C_2 R_p], for each portfolio.
+
+    (n1, n2, n3) levels and slopes -> two arrays (n_portfolios, n1, n2, n3).
+    """
+    n1, n2, n3 = level.shape
+    moved = _moved(growth, level)
+    shape = (problem.n_portfolios, -1, n1 * n2 * n3)
+    value = (problem.node_weights @ smooth.value(moved).reshape(shape)).reshape(-1, n1, n2, n3)
+    if n2 == 1:
+        return value, np.zeros_like(value)
+    slope = (smooth.marginal(moved) * _moved(growth, slope2)).reshape(shape)
+    weighted = (problem.node_weights * problem.gross)[:, None, :]
+    return value, (weighted @ slope).reshape(-1, n1, n2, n3)
+
+
+def _moved(growth: GrowthMaps, level: FloatArray) -> FloatArray:
+    """Interpolate at the grown nodes: (n1, n2, n3) -> (n_maps, n1, n2, n3)."""
     n1, n2, n3 = level.shape
     map1, map2, map3 = growth.maps
     cell1, cell2, cell3 = growth.cells
@@ -89,8 +111,7 @@ def expected_value(
             (map3 @ before).reshape(n_maps * n3, n1 * n2), before.reshape(n_maps * n3, n1 * n2), _rows(cell3)
         )
         moved = moved.reshape(n_maps, n3, n1, n2).transpose(0, 2, 3, 1)
-    value = smooth.value(np.ascontiguousarray(moved)).reshape(problem.n_portfolios, -1, n1 * n2 * n3)
-    return (problem.node_weights @ value).reshape(problem.n_portfolios, n1, n2, n3)
+    return np.ascontiguousarray(moved)
 
 
 def _rows(cells: IntArray) -> IntArray:

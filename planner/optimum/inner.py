@@ -30,6 +30,8 @@ class Continuation:
         g^-1(J / weight) on the nodes of (tax-deferred, taxable, tax-free).
     slope1 : ndarray of shape (n2, n1, n3)
         Its slope along taxable.
+    slope2 : ndarray of shape (n2, n1, n3)
+        Its slope along tax-deferred.
     slope3 : ndarray of shape (n2, n3)
         Its slope along tax-free where taxable is used up.
     weight : float
@@ -38,6 +40,7 @@ class Continuation:
 
     level: FloatArray
     slope1: FloatArray
+    slope2: FloatArray
     slope3: FloatArray
     weight: float
 
@@ -87,6 +90,8 @@ class CashTable:
     grid : CashGrid
     level, slope : ndarray of shape (n2, n_cash, n3)
         g^-1(G / weight) and its slope along money (envelope theorem: marginal utility).
+    slope2 : ndarray of the same shape
+        Slope of the level along tax-deferred (envelope theorem).
     spending : ndarray of the same shape
         c, money a year.
     """
@@ -94,6 +99,7 @@ class CashTable:
     grid: CashGrid
     level: FloatArray
     slope: FloatArray
+    slope2: FloatArray
     spending: FloatArray
 
 
@@ -170,12 +176,14 @@ def cash_table(
     later = np.broadcast_to(w * smooth.value(level[:, 0]) if w else 0 * level[:, 0], (n2, n3))[:, None, :]
     later = np.array(np.broadcast_to(later, shape))
     marginal = felicity.marginal(np.where(left_copy[None, :, None], cash * (1 - 1e-12) - 1e-300, cash))
+    price2 = w * smooth.marginal(level) * following.slope2 if w else np.zeros_like(level)
+    deferred = np.array(np.broadcast_to(price2[:, :1, :], shape))
 
     # Some cash is left in taxable.
     some = np.nonzero(index >= 0)
     if some[0].size:
         j, k, i3 = some
-        c, lvl, price = _solve_along(
+        c, lvl, price, at, share = _solve_along(
             cash_nodes[k, i3],
             index[some],
             taxable,
@@ -188,6 +196,7 @@ def cash_table(
             w,
         )
         spending[some], marginal[some] = c, price
+        deferred[some] = _along(following.slope2, j, at, i3, share) * w * smooth.marginal(lvl)
         later[some] = w * smooth.value(lvl) if w else 0.0
 
     # Cash is used up and tax-free pays the rest.
@@ -200,9 +209,10 @@ def cash_table(
         c = np.array(total)  # everything is spent where even tax-free runs out
         price = felicity.marginal(np.where(left_copy[k], c * (1 - 1e-12) - 1e-300, c))
         value = (w * smooth.value(level[:, 0, 0]) if w else 0 * level[:, 0, 0])[j]
+        other = price2[j, 0, 0]
         held = np.nonzero(inside >= 0)[0]
         if held.size:
-            c[held], lvl, price[held] = _solve_along(
+            c[held], lvl, price[held], at, share = _solve_along(
                 total[held],
                 inside[held],
                 tax_free,
@@ -215,11 +225,21 @@ def cash_table(
                 w,
             )
             value[held] = w * smooth.value(lvl) if w else 0.0
-        spending[draw], marginal[draw], later[draw] = c, price, value
+            at_zero = following.slope2[:, 0, :, None]
+            zero = np.zeros(held.size, dtype=np.int64)
+            other[held] = _along(at_zero, j[held], at, zero, share) * w * smooth.marginal(lvl)
+        spending[draw], marginal[draw], later[draw], deferred[draw] = c, price, value, other
 
     table = smooth.inverse((felicity.value(spending) + later) / weight)
-    slope = marginal / (weight * smooth.marginal(table))
-    return CashTable(grid, table, np.minimum(slope, _steepest(table, m)), spending)
+    unit = weight * smooth.marginal(table)
+    slope = np.minimum(marginal / unit, _steepest(table, m))
+    return CashTable(grid, table, slope, deferred / unit, spending)
+
+
+def _along(values: FloatArray, j: IntArray, k: IntArray, other: IntArray, share: FloatArray) -> FloatArray:
+    """Linear between nodes k and k + 1 of axis 1, held at the last node beyond it."""
+    left = values[j, k, other]
+    return np.asarray(left + np.clip(share, 0.0, 1.0) * (values[j, k + 1, other] - left))
 
 
 def _steepest(level: FloatArray, nodes: FloatArray) -> FloatArray:
@@ -254,7 +274,7 @@ def _solve_along(
     slope: FloatArray,
     felicity: Felicity,
     weight: float,
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+) -> tuple[FloatArray, FloatArray, FloatArray, IntArray, FloatArray]:
     """Split money into spending and what is kept in one account: c + y = money.
 
     Newton on y + c(y) = money, started from the endogenous knots of
@@ -277,4 +297,4 @@ def _solve_along(
             excess = y + np.minimum(felicity.spend(price), money) - money
             y = np.clip(y - excess / (1.0 + slope_of_spending), left, highest)
     y = np.minimum(y, np.maximum(money, 0.0))
-    return money - y, lvl, price
+    return money - y, lvl, price, k, (y - left) / (right - left)

@@ -33,12 +33,14 @@ class OuterChoice:
     cash_slope : slope of the level along cash.
     exchange : r, what money left in tax-deferred is worth in cash after tax; 1 - T'(g) where g is
         between kinks, between the two sides' values where it sits at one, beyond them at a bound.
+    slope2 : slope of the level along the opening tax-deferred balance.
     """
 
     level: FloatArray
     gross: FloatArray
     cash_slope: FloatArray
     exchange: FloatArray
+    slope2: FloatArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -149,7 +151,7 @@ class Outer:
         everywhere = np.arange(level.size)
         if self.nodes2.size == 1:
             level, _, along, exchange = self.evaluate(everywhere, gross, np.zeros(level.size))
-            return OuterChoice(level, gross, along, np.ones(level.size))
+            return OuterChoice(level, gross, along, np.ones(level.size), np.zeros(level.size))
         if self.situation.minimum_share > 0 or not self.on_nodes:
             self._try(level, gross, everywhere, self.low)
         if self.situation.accessible_share < 1 or not self.on_nodes:
@@ -164,7 +166,32 @@ class Outer:
         below, above = self.side_slopes(gross)
         least = np.where(gross >= self.high, -np.inf, 1.0 - np.maximum(above, below))
         most = np.where(gross <= self.low, np.inf, 1.0 - np.minimum(above, below))
-        return OuterChoice(level, gross, along, np.clip(exchange, least, most))
+        exchange = np.clip(exchange, least, most)
+        slope2 = self._deferred_slope(gross, along, exchange, below, above)
+        return OuterChoice(level, gross, along, exchange, slope2)
+
+    def _deferred_slope(
+        self, gross: FloatArray, along: FloatArray, exchange: FloatArray, below: FloatArray, above: FloatArray
+    ) -> FloatArray:
+        """Slope of the level along the opening tax-deferred balance (envelope theorem).
+
+        Money left is worth r in cash (and, with conversions, what tax-free is worth above cash, of
+        which the minimum distribution has no part). At the least g a share d of one more unit must be
+        taken, at the largest g a share s may be.
+        """
+        situation = self.situation
+        d, s = situation.minimum_share, situation.accessible_share
+        spread = np.zeros(gross.size)
+        if situation.conversions:
+            cash, left, l3, free, _, _ = self.place(np.arange(gross.size), gross, np.zeros(gross.size))
+            spread = self.surface(cash, left, l3, free)[3]
+        kept = exchange * along + spread
+        slope = kept - d * spread
+        if d > 0:
+            slope = np.where(gross <= self.low, (1 - d) * kept + d * along * (1 - above), slope)
+        taken = along * (1 - below) + spread
+        slope = np.where(gross >= self.high, (1 - s) * kept + s * taken - d * spread, slope)
+        return np.asarray(slope)
 
     def _try(self, level: FloatArray, gross: FloatArray, point: IntArray, g: FloatArray) -> None:
         value = self.evaluate(point, g, np.zeros(g.size))[0]
@@ -287,6 +314,7 @@ def best_on_nodes(surface: Surface, taxable: FloatArray, situation: Situation) -
         choice.gross.reshape(shape),
         choice.cash_slope.reshape(shape),
         choice.exchange.reshape(shape),
+        choice.slope2.reshape(shape),
     )
 
 

@@ -25,11 +25,10 @@ class OptimalPolicy:
         Nodes of taxable, tax-deferred, tax-free.
     level : ndarray of shape (n_years, n_statuses, n1, n2, n3)
         C = g^-1(V / A) at opening balances, money a year.
-    willing : same shape
-        U'^-1 of the marginal value of cash on hand, money a year per unit of need: spending, were
-        it not for the kink at essential spending, the floor's line and the ceiling.
     gross : same shape
         g = w2 + k, money taken out of tax-deferred.
+    slopes : ndarray of shape (n_years, n_statuses, 3, n1, n2, n3)
+        Slopes of the level along taxable, tax-deferred and tax-free.
     surfaces : n_years tuples of n_statuses Surface
         The year's value once g is fixed, for choices at balances between the nodes.
     situations : n_years tuples of n_statuses Situation
@@ -44,8 +43,8 @@ class OptimalPolicy:
 
     grids: tuple[LogGrid, LogGrid, LogGrid]
     level: FloatArray
-    willing: FloatArray
     gross: FloatArray
+    slopes: FloatArray
     surfaces: tuple[tuple[Surface, ...], ...]
     situations: tuple[tuple[Situation, ...], ...]
     portfolio: IntArray
@@ -80,6 +79,16 @@ class OptimalPolicy:
     def level_spending(self, balances: FloatArray) -> float:
         """f^-1(V_0 / A_0): steady spending worth as much (meaningful without a legacy)."""
         return float(self.utility.inverse(self.value(balances[None, :])[0] / self.weights[0, 0]))
+
+    def prices(self, t: int, h: int, balances: FloatArray) -> FloatArray:
+        """Slopes of V along the three accounts, utility per unit of money, linear between nodes; (n, 3)."""
+        if t >= self.level.shape[0]:
+            return np.zeros(balances.shape)
+        corner, weight = self._corners(balances)
+        level = (self.level[t, h].ravel()[corner] * weight).sum(axis=0)
+        unit = self.weights[t, h] * self.smooth.marginal(level)
+        slopes = self.slopes[t, h].reshape(3, -1)[:, corner]
+        return np.asarray(unit[:, None] * (slopes * weight).sum(axis=1).T)
 
     def decide(self, problem: Problem, t: int, state: State) -> Decision:
         """Choices at any balances: the smooth quantities are linear between nodes."""

@@ -19,7 +19,7 @@ import numpy as np
 from planner.optimum.expectation import GrowthMaps, expected_value, growth_maps
 from planner.optimum.grids import CashGrid, LogGrid, derivative_matrix, limited_slopes
 from planner.optimum.inner import TINY_SLOPE, Continuation, Felicity, cash_table
-from planner.optimum.outer import best_on_nodes, situation_of
+from planner.optimum.outer import OuterChoice, best_on_nodes, situation_of
 from planner.optimum.policy import OptimalPolicy
 from planner.optimum.surface import Surface
 from planner.piecewise import FloatArray
@@ -139,33 +139,38 @@ def solve(
     low, high = cash_range(problem, grids)
     slopes = [derivative_matrix(grid.nodes) for grid in grids]
     level = np.zeros((n_years, n_statuses, *shape))
-    willing = np.zeros_like(level)
     gross = np.zeros_like(level)
+    found = np.zeros((n_years, n_statuses, 3, *shape))
     surfaces: list[list[Surface]] = [[] for _ in range(n_years)]
     situations = [[situation_of(problem, t, h) for h in range(n_statuses)] for t in range(n_years)]
     portfolio = np.zeros(level.shape, dtype=np.int64)
     maps: dict[tuple[float, ...], GrowthMaps] = {}
 
     for t in range(n_years - 1, -1, -1):
-        expected: dict[tuple[int, tuple[float, ...]], FloatArray] = {}
+        expected: dict[tuple[int, tuple[float, ...]], tuple[FloatArray, FloatArray]] = {}
         for h in range(n_statuses):
             paid = tuple(problem.contribution[t, h].tolist())
             if paid not in maps:
                 maps[paid] = growth_maps(problem, grids, problem.contribution[t, h])
             total = problem.death[t, h] * maps[paid].estate
+            total2 = problem.death[t, h] * maps[paid].estate2
             for following in np.flatnonzero(problem.transition[t, h] > 0) if t + 1 < n_years else ():
                 key = (int(following), paid)
                 if key not in expected:
-                    expected[key] = weights[t + 1, following] * expected_value(
-                        problem, maps[paid], level[t + 1, following], smooth
+                    expected[key] = expected_value(
+                        problem, maps[paid], level[t + 1, following], found[t + 1, following, 1], smooth
                     )
-                total = total + problem.transition[t, h, following] * expected[key]
-            portfolio[t, h] = total.argmax(axis=0)
-            later = total.max(axis=0)
+                chance = problem.transition[t, h, following] * weights[t + 1, following]
+                total = total + chance * expected[key][0]
+                total2 = total2 + chance * expected[key][1]
+            best = total.argmax(axis=0)
+            portfolio[t, h] = best
+            later = np.take_along_axis(total, best[None], axis=0)[0]
+            later2 = np.take_along_axis(total2, best[None], axis=0)[0]
 
             felicity = Felicity(problem.utility, smooth, float(problem.need[t, h]), problem.ceiling)
             following_level = _continuation(
-                later, float(later_weights[t, h]), problem.discount, smooth, slopes, grids
+                later, later2, float(later_weights[t, h]), problem.discount, smooth, slopes, grids
             )
             grid = CashGrid.build(
                 settings.cash, grids[0].scale, low, high, felicity.need * problem.utility.essential
@@ -182,17 +187,16 @@ def solve(
             surface = Surface(table, grids[1], grids[2], slopes[1], slopes[2])
             choice = best_on_nodes(surface, grids[0].nodes, situation_of(problem, t, h))
             level[t, h] = choice.level
-            price = weights[t, h] * smooth.marginal(choice.level) * np.maximum(choice.cash_slope, TINY_SLOPE)
-            willing[t, h] = smooth.power_marginal_inverse(price)
             gross[t, h] = choice.gross
+            found[t, h] = _slopes(choice, slopes[2], grids[2])
             surfaces[t].append(surface)
         if progress is not None:
             progress((n_years - t) / n_years)
     return OptimalPolicy(
         grids=grids,
         level=level,
-        willing=willing,
         gross=gross,
+        slopes=found,
         surfaces=tuple(tuple(row) for row in surfaces),
         situations=tuple(tuple(row) for row in situations),
         portfolio=portfolio,
@@ -202,8 +206,17 @@ def solve(
     )
 
 
+def _slopes(choice: OuterChoice, along3: FloatArray, free: LogGrid) -> FloatArray:
+    """Slopes of the level along the three accounts, (3, n1, n2, n3); tax-free at least cash."""
+    level = choice.level.transpose(2, 0, 1)
+    free_slope = limited_slopes(np.tensordot(along3, level, axes=1), level, free.nodes)
+    cash = np.maximum(choice.cash_slope, TINY_SLOPE)
+    return np.stack([cash, choice.slope2, np.maximum(free_slope.transpose(1, 2, 0), cash)])
+
+
 def _continuation(
     later: FloatArray,
+    later2: FloatArray,
     weight: float,
     discount: float,
     smooth: SpendingUtility,
@@ -212,9 +225,10 @@ def _continuation(
 ) -> Continuation:
     """Level and slopes of J, in the inner choice's axis order (tax-deferred, taxable, tax-free)."""
     if weight == 0.0:
-        level = np.zeros(later.shape)
+        level, slope2 = np.zeros(later.shape), np.zeros(later.shape)
     else:
         level = smooth.inverse(later / weight)
+        slope2 = later2 / (weight * smooth.marginal(level))
     slope1 = limited_slopes(np.tensordot(slopes[0], level, axes=1), level, grids[0].nodes)
     at_zero = level[0].T  # (n3, n2): along tax-free where taxable is used up
     slope3 = limited_slopes(slopes[2] @ at_zero, at_zero, grids[2].nodes)
@@ -222,6 +236,7 @@ def _continuation(
     return Continuation(
         np.ascontiguousarray(level.transpose(first)),
         np.ascontiguousarray(slope1.transpose(first)),
+        np.ascontiguousarray(slope2.transpose(first)),
         slope3.T,
         discount * weight,
     )

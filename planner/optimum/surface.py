@@ -37,7 +37,7 @@ class Surface:
             return np.asarray(values @ slopes3.T)
 
         level, slope = table.level, table.slope
-        level2 = limited_slopes(along2(level), level, deferred.nodes)
+        level2 = limited_slopes(table.slope2, level, deferred.nodes)
         level3 = limited_slopes(along3(level).transpose(2, 0, 1), level.transpose(2, 0, 1), free.nodes)
         level3 = level3.transpose(1, 2, 0)
         parts = [level, slope, level2, along2(slope)]
