@@ -12,17 +12,18 @@ from pathlib import Path
 _PART = ".part"
 
 
-def write_whole(path: Path, content: bytes) -> None:
+def write_whole(path: Path, content: bytes, *, clear: bool = True) -> None:
     """Write one file; see `write_all`."""
-    write_all({path: content})
+    write_all({path: content}, clear=clear)
 
 
-def write_all(contents: Mapping[Path, bytes]) -> None:
+def write_all(contents: Mapping[Path, bytes], *, clear: bool = True) -> None:
     """Write files so that no name ever holds half of one, replacing what was there.
 
     The bytes of all of them go to temporary files in the same folders, which only then take the
     names: after a failure (a full disk, an interrupt) whatever was there before is still there,
-    and nothing else. What a process that was killed has left of the same names is cleared away.
+    and nothing else. What a process that was killed has left of the same names is cleared away,
+    unless the caller sees to that (`clear`): it takes a look at every name in the folder.
     A name that is a link keeps being one; a device or pipe is written to directly.
 
     Raises
@@ -40,7 +41,8 @@ def write_all(contents: Mapping[Path, bytes]) -> None:
                     direct.append((target, content))
                     continue
                 part = target.with_name(f"{_part_prefix(target)}{_owner()}.{index}{_PART}")
-                _clear_away(target)
+                if clear:
+                    _clear_away(target)
                 if target.exists() and not os.access(target, os.W_OK):
                     raise PermissionError(13, "the file may not be written")
                 staged.append((path, part, target))

@@ -36,6 +36,7 @@ from planner.projection import (
     schedule,
     strategy_result,
 )
+from planner.proof import proof
 from planner.rules import RULES, Rule, rules_for
 from planner.scenarios import plan_what_ifs
 from planner.simulation import Paths, Scenarios, draw_scenarios, simulate
@@ -60,6 +61,8 @@ class PlanSettings:
         Drawn futures that every strategy meets.
     n_what_if_paths : int
         Drawn futures for each what-if.
+    n_proof_paths : int
+        Paths on which the upper bound is estimated.
     seed : int
     solver, what_if_solver : SolverSettings
         Grids; what-ifs differ from the plan by what coarser grids say of both (see `_what_ifs`).
@@ -71,6 +74,7 @@ class PlanSettings:
 
     n_paths: int = 20_000
     n_what_if_paths: int = 3_000
+    n_proof_paths: int = 300
     seed: int = 20260101
     solver: SolverSettings | None = None
     what_if_solver: SolverSettings = SolverSettings(12, 12, 8, 48)  # noqa: RUF009
@@ -261,7 +265,7 @@ def make_plan(
         this_year=instructions,
         level_spending=strategies[0].level_spending,
         value_share_simulated=_simulated_share(solved),
-        proof=_proof(solved),
+        proof=proof(problem, policy, settings.n_proof_paths, settings.seed),
         schedule=schedule(problem, paths, solved.late, plan_year),
         lookup=lookup(problem, policy, middle),
         band=no_change_band(problem, policy, middle),
@@ -299,11 +303,6 @@ def first_choice(solved: Solved) -> Choice:
         spending=float(paths.spending[0, 0]),
         portfolio=int(paths.portfolio[0, 0]),
     )
-
-
-def _proof(solved: Solved) -> Proof | None:
-    """How near the best possible; None until the upper bound is computed."""
-    return None
 
 
 def _simulated_share(solved: Solved) -> float:
