@@ -20,7 +20,7 @@ from planner.instructions import Choice, FirstYear, first_year, lifelong_income,
 from planner.mortality import life_expectancy
 from planner.optimum.policy import OptimalPolicy
 from planner.optimum.recursion import SolverSettings, solve
-from planner.plan_record import Plan, Proof, Sources, StrategyResult, SurvivorView, WhatIfResult
+from planner.plan_record import Plan, Sources, StrategyResult, SurvivorView, WhatIfResult
 from planner.problem import Policy, Problem
 from planner.problem_building import Builder, build_problem, life_table_of, tax_rules_of
 from planner.projection import (

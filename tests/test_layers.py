@@ -24,7 +24,7 @@ LAYERS = (
     ),
     ("planner.reports",),
     ("planner.plan",),
-    ("planner.instructions", "planner.projection"),
+    ("planner.instructions", "planner.projection", "planner.proof"),
     ("planner.plan_record",),
     ("planner.rules", "planner.banded"),
     ("planner.outcomes",),
