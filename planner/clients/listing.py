@@ -134,7 +134,7 @@ def _rows(
             keys[name] = run_key(content, work)
             row = store.finished(name, workbook, keys[name])
             if row is None:
-                yield Task(name, workbook, content, work)
+                yield Task(name, workbook, str(path.parent.resolve()), content, work)
             else:
                 already += 1
                 note(row, before=True)

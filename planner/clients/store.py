@@ -116,10 +116,10 @@ class Store:
         text = json.dumps(
             {"form": _FORM} | asdict(record) | {"row": row_json(row)}, indent=1, ensure_ascii=False
         )
-        write_whole(self.folder / RECORDS / f"{row.name}.json", text.encode("utf-8"))
+        write_whole(self.folder / RECORDS / f"{row.name}.json", text.encode("utf-8"), clear=False)
         self.records[row.name] = record
-        write_whole(self.folder / f"{row.name}.pdf", done.pdf)
-        write_whole(self.folder / f"{row.name}.json", done.results)
+        write_whole(self.folder / f"{row.name}.pdf", done.pdf, clear=False)
+        write_whole(self.folder / f"{row.name}.json", done.results, clear=False)
         return self.with_last(row)
 
     def with_last(self, row: ClientRow) -> ClientRow:

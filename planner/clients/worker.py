@@ -8,8 +8,8 @@ from __future__ import annotations
 
 import os
 import threading
-from dataclasses import dataclass, field
-from pathlib import PurePosixPath
+from dataclasses import dataclass, field, replace
+from pathlib import Path, PurePosixPath
 from typing import TYPE_CHECKING
 
 from planner import __version__
@@ -49,10 +49,23 @@ class Work:
 
 @dataclass(frozen=True, slots=True)
 class Task:
-    """One client: the name of its files, its workbook's path as shown, the workbook's bytes."""
+    """One client.
+
+    Attributes
+    ----------
+    name
+        Of its files, without the ending.
+    workbook
+        Path as shown.
+    folder
+        Where the workbook lies: its logo is looked for there.
+    content
+        The workbook's bytes.
+    """
 
     name: str
     workbook: str
+    folder: str
     content: bytes = field(repr=False)
     work: Work
     version: str = __version__
@@ -119,10 +132,13 @@ def _planned(task: Task) -> Finished:
     from planner.clients.rows import planned_row
     from planner.reports.export import json_text, results_json
     from planner.reports.pdf import render_pdf
+    from planner.workbook.logo import with_logo
     from planner.workbook.reading import read_content
 
     name = PurePosixPath(task.workbook).name
     read = read_content(task.content, name)
+    household, warnings = with_logo(read.household, read.data, Path(task.folder))
+    read = replace(read, household=household, warnings=(*read.warnings, *warnings))
     plan, changed = _plan_with_changes(read, task.work, name)
     with _DRAWING:
         pdf = render_pdf(plan)
