@@ -167,3 +167,12 @@ def test_layers_of_grey_stay_apart_and_are_labelled_directly():
     chart = next(b for b in flat(report_blocks(plan_builder.build())) if isinstance(b, StackChart))
     labels = [s.text for s in draw(chart, 490.0).contents if isinstance(s, String)]
     assert {"From taxable", "From tax-deferred", "From tax-free"} <= set(labels)
+
+
+def test_bills_say_who_pays_before_and_after_pensions_start():
+    plan = plan_builder.build(plan_builder.single())
+    assert "Pensions for life pay 83% of your bills now, after tax. Savings pay the rest." in section(plan, 1)
+    assert "Savings pay the rest" not in section(replace(plan, bills_covered_now=1.2), 1)
+    wages = (("Shop", 9_000.0),)
+    early = replace(plan, bills_covered_now=0.0, this_year=replace(plan.this_year, incomes=wages))
+    assert "No pension for life is paid yet. Work, other income and savings pay" in section(early, 1)

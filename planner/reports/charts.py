@@ -224,6 +224,8 @@ def _(chart: LinesChart, available: float) -> Drawing:
         (ACCENT, 2.0, None),
         (HexColor("#8A8A8A"), 1.6, None),
     )
+    if len(chart.series) == 1:
+        styles = styles[1:]
     labels = []
     if chart.line is not None:
         _line(drawing, scale, chart.line, INK, 1.0, [1, 2])
@@ -237,7 +239,7 @@ def _(chart: LinesChart, available: float) -> Drawing:
             drawing.add(
                 Rect(scale.x(end) - 2, scale.y(series[-1]) - 2, 4, 4, fillColor=color, strokeColor=None)
             )
-        labels.append((name, series[-1], color if color is not styles[2][0] else SOFT_INK, BOLD))
+        labels.append((name, series[-1], SOFT_INK if color is styles[-1][0] else color, BOLD))
     _end_labels(drawing, scale, labels)
     return drawing
 

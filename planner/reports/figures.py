@@ -34,6 +34,11 @@ def rounded(value: float, unit: float = 1.0) -> int:
     return int(math.floor(value / unit + 0.5) * unit)
 
 
+def at_least(value: float) -> int:
+    """The next whole unit at or above `value` (to a millionth): for amounts that must be reached."""
+    return math.ceil(value - 1e-6)
+
+
 @dataclass(frozen=True, slots=True)
 class Money:
     """Amounts in one currency (ISO 4217), as text.

@@ -99,7 +99,7 @@ def _needs(blocks: Sequence[Block], built: Sequence[Sequence[Any]], width: float
         height = _height(flowables, width)
         if isinstance(block, Heading):
             total += height
-        elif isinstance(block, Text) and height < _SHORT and isinstance(after, _KEPT):
+        elif isinstance(block, Text) and height < _READ_ALONE and isinstance(after, _KEPT):
             # A short text between a heading and its table or chart stays with both.
             total += height
         elif isinstance(block, Facts) and isinstance(after, Signatures):
@@ -109,15 +109,17 @@ def _needs(blocks: Sequence[Block], built: Sequence[Sequence[Any]], width: float
             return total + height + _height(note, width)
         elif isinstance(block, Table | Facts | Bullets):
             # A list to tick off is kept on one page if it can be.
-            whole = 3 * _SHORT if not (isinstance(block, Table) and block.blank) else 6 * _SHORT
+            whole = 4 * _SHORT if not (isinstance(block, Table) and block.blank) else 6 * _SHORT
             return total + (height if height <= whole else _SHORT)
         else:
             return total + (height if isinstance(block, Signatures) else min(height, _START))
     return total
 
 
-# Points: what counts as short, and the least that follows a heading (two lines of text).
+# Points: what counts as short; text that may be parted from the table or chart it introduces; the
+# least that follows a heading (two lines of text).
 _SHORT = 100.0
+_READ_ALONE = 150.0
 _START = 40.0
 
 

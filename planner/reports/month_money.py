@@ -3,12 +3,11 @@
 from __future__ import annotations
 
 import calendar
-import math
 from dataclasses import dataclass
 from datetime import date
 
 from planner.plan_record import Plan
-from planner.reports.figures import add_up
+from planner.reports.figures import add_up, at_least
 from planner.reports.year_money import tax_year_end, year_money
 
 N_MONTHS = 12
@@ -52,7 +51,7 @@ def year_by_month(plan: Plan) -> YearByMonth:
     year = year_money(plan)
     days = tuple(months_after(plan.household.plan_date, k) for k in range(N_MONTHS))
     in_time = max(1, sum(day <= tax_year_end(plan.household) for day in days))
-    due = {a.account: math.ceil(a.still_due - 1e-6) for a in plan.this_year.accounts}
+    due = {a.account: at_least(a.still_due) for a in plan.this_year.accounts}
     from_accounts = [line for line in year.lines if line.account is not None]
     columns = []
     brought_forward = False

@@ -22,6 +22,12 @@ def costs_and_assumptions(plan: Plan) -> tuple[Block, ...]:
         NewPage(),
         Heading("Costs and assumptions", 1, 10),
         *_costs(plan),
+        *_warnings(plan),
+        Heading("Alternatives considered and drawbacks"),
+        Heading("Alternatives considered", 3),
+        Text(household.practice.alternatives_considered.strip() or f"Not written yet ({DRAFT})."),
+        Heading("Drawbacks", 3),
+        Text(household.practice.drawbacks.strip() or f"Not written yet ({DRAFT})."),
         Heading("Markets and prices"),
         Text(
             "Expected returns, risks and price rises are your adviser's assumptions, entered in the workbook "
@@ -34,12 +40,6 @@ def costs_and_assumptions(plan: Plan) -> tuple[Block, ...]:
         Heading("Lives, taxes and the calculation"),
         Facts(_sources(plan)),
         *_notes(plan),
-        *_warnings(plan),
-        Heading("Alternatives considered and drawbacks"),
-        Heading("Alternatives considered", 3),
-        Text(household.practice.alternatives_considered.strip() or f"Not written yet ({DRAFT})."),
-        Heading("Drawbacks", 3),
-        Text(household.practice.drawbacks.strip() or f"Not written yet ({DRAFT})."),
     )
 
 

@@ -8,7 +8,7 @@ from typing import Final, TypeAlias
 
 from planner.plan_record import AccountInstruction, Plan
 from planner.reports.blocks import Block, Column, Heading, NewPage, Table, Text
-from planner.reports.figures import Money, add_up, day_words, one_year_after, percent
+from planner.reports.figures import Money, add_up, at_least, day_words, one_year_after, percent
 from planner.reports.month_money import year_by_month
 from planner.reports.wording import CANNOT_BE_UNDONE, CHECK_TAX
 from planner.reports.year_money import (
@@ -98,7 +98,11 @@ def _accounts(plan: Plan) -> Block:
         if has_minimum:
             row += [
                 money.exact_cell(v)
-                for v in (account.minimum_distribution, account.taken, math.ceil(account.still_due - 1e-6))
+                for v in (
+                    at_least(account.minimum_distribution),
+                    account.taken,
+                    at_least(account.still_due),
+                )
             ]
         if now.convert >= 0.5:
             row.append(money.exact_cell(account.convert))
@@ -244,12 +248,10 @@ def _trades(plan: Plan) -> tuple[Block, ...]:
     if not trades:
         done = "" if unknown else " No trades are needed."
         return (heading, Text(f"Portfolio for this year: '{now.portfolio}'.{done}"), *ask)
-    moves = tuple(
-        Text(f"Move about {money.about(amount)} from '{source}' to '{to}'.")
+    moves = [
+        f"Move about {money.about(amount)} from '{source}' to '{to}'."
         for source, to, amount in investment_moves(plan)
-    )
-    if not moves:
-        moves = (Text(f"Stay in '{now.portfolio}'; sell only what is paid out."),)
+    ] or [f"Stay in '{now.portfolio}'; sell only what is paid out."]
     moved = ", or moved to tax-free and invested there" if now.convert >= 0.5 else ""
     classes = household.markets.asset_classes
     columns = (
@@ -280,7 +282,7 @@ def _trades(plan: Plan) -> tuple[Block, ...]:
         "far as the money is paid out, so ask your tax preparer before larger changes there.",
         strong=(len(rows) - 1,) if len(trades) > 1 else (),
     )
-    return (heading, *moves, table, *ask)
+    return (heading, Text(" ".join(moves)), table, *ask)
 
 
 def _to_do(plan: Plan) -> Table:
@@ -332,7 +334,7 @@ def _account_tasks(
 ) -> list[tuple[str, str, str]]:
     tasks = []
     if account.still_due >= 1:
-        due = money.exact(math.ceil(account.still_due - 1e-6))
+        due = money.exact(at_least(account.still_due))
         tasks.append(
             (f"Take at least {due} from {account.account}: the least that must be taken", "You", year_end)
         )

@@ -48,6 +48,4 @@ def _who(plan: Plan) -> tuple[tuple[str, str], ...]:
         ("Plan date", day_words(plan.household.plan_date, plan.household.currency)),
         ("Workbook", f"{sources.workbook_name}, fingerprint {sources.workbook_sha256[:16]}"),
         ("Program version", sources.version),
-        ("Tables", "; ".join((*sources.life_tables, sources.tax_rules))),
-        ("Random seed", f"{sources.seed}, {sources.n_paths:,} futures"),
     )

@@ -14,13 +14,14 @@ from planner.reports.blocks import (
     OnePage,
     Text,
 )
-from planner.reports.figures import Money, day_words, listed, of_futures, one_year_after, percent
+from planner.reports.figures import Money, at_least, day_words, listed, of_futures, one_year_after, percent
 from planner.reports.wording import (
     CALL_US,
     CALL_US_COUPLE,
     CALL_US_SINGLE,
     CHECK_TAX,
     ESTIMATES,
+    LIFELONG_KINDS,
     SUITABILITY_TEXTS,
     as_long_as_alive,
 )
@@ -165,7 +166,7 @@ def _least(plan: Plan) -> tuple[str, str]:
         if plan.this_year.minimum_distribution >= 1:
             return ("The least you must take", "You have already taken this year's least amount.")
         return ("The least you must take", "Nothing has to be taken out this year.")
-    parts = listed([f"{money.exact(a.still_due)} from {a.account}" for a in due])
+    parts = listed([f"{money.exact(at_least(a.still_due))} from {a.account}" for a in due])
     return ("The least you must take", f"{parts}, by {by}. The amounts above include it.")
 
 
@@ -226,11 +227,18 @@ def band_sentence(plan: Plan) -> str:
 
 
 def _bills(plan: Plan) -> tuple[str, str]:
-    text = f"Pensions for life pay {percent(plan.bills_covered_now, 0)} of your bills now, after tax."
+    lifelong = {i.name for i in plan.household.incomes if i.kind in LIFELONG_KINDS and i.to_age is None}
+    works = any(name not in lifelong and amount > 0 for name, amount in plan.this_year.incomes)
+    others = "Work, other income and savings" if works else "Savings"
+    if plan.bills_covered_now < 0.005:
+        text = f"No pension for life is paid yet. {others} pay your bills."
+    else:
+        text = f"Pensions for life pay {percent(plan.bills_covered_now, 0)} of your bills now, after tax."
+        text += f" {others} pay the rest." if plan.bills_covered_now < 1 else ""
     if plan.survivors:
         alone = [f"{percent(s.bills_covered, 0)} for {s.survivor}" for s in plan.survivors]
-        text += f" If one of you were left alone: {listed(alone)}."
-    return ("Your bills", f"{text}{' Savings pay the rest.' if plan.bills_covered_now < 1 else ''}")
+        text += f" If one of you were left alone, pensions would pay {listed(alone)}."
+    return ("Your bills", text)
 
 
 def _safety(plan: Plan) -> tuple[str, str]:

@@ -126,6 +126,7 @@ def account_trades(plan: Plan) -> tuple[AccountTrade, ...]:
     """Trades of every account whose present portfolio is known and in which something moves."""
     portfolios = {p.name: p.weights for p in plan.household.portfolios}
     target = portfolios.get(plan.this_year.portfolio)
+    on_paper = {line.account: line.amount for line in year_money(plan).lines if line.account is not None}
     trades = []
     for account in plan.this_year.accounts:
         held = portfolios.get(account.held_now or "")
@@ -133,10 +134,12 @@ def account_trades(plan: Plan) -> tuple[AccountTrade, ...]:
             continue
         stays = stays_invested(account)
         changes = [w * stays - h * account.balance for w, h in zip(target, held, strict=True)]
-        leaves = rounded(account.balance - stays)
-        amounts = add_up(changes, -leaves)
+        leaves = on_paper.get(account.account, 0) + rounded(account.convert)
+        amounts = list(add_up(changes, rounded(sum(changes))))
+        # A unit that rounding leaves over goes to the largest trade.
+        amounts[max(range(len(amounts)), key=lambda j: abs(changes[j]))] -= leaves + sum(amounts)
         if any(amounts):
-            trades.append(AccountTrade(account.account, str(account.held_now), amounts, leaves))
+            trades.append(AccountTrade(account.account, str(account.held_now), tuple(amounts), leaves))
     return tuple(trades)
 
 
