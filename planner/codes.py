@@ -135,6 +135,7 @@ HOUSEHOLD_CODES: Final[dict[str, str]] = {
     "heirs-tax-range": "heirs' tax rate outside 0 to below 1",
     "no-mortality-adjustment": "a population life table without an adjustment (warning)",
     "no-local-tax": "no state or regional tax given (warning)",
+    "logo-unusable": "a logo that is not there, no PNG or JPEG picture, or too large (warning)",
     "essentials-above-means": "essential spending beyond income and a level annuity (warning)",
     "tax-status-missing": "own brackets lack a status that is needed",
     "bracket-start": "the first bracket does not start at 0",
