@@ -176,3 +176,11 @@ def test_bills_say_who_pays_before_and_after_pensions_start():
     wages = (("Shop", 9_000.0),)
     early = replace(plan, bills_covered_now=0.0, this_year=replace(plan.this_year, incomes=wages))
     assert "No pension for life is paid yet. Work, other income and savings pay" in section(early, 1)
+
+
+@pytest.mark.parametrize(("error", "said"), [(0.002, "less than 1 of 100"), (0.0149, "about 3 of 100")])
+def test_the_count_of_futures_says_its_own_error(error, said):
+    """Twice the standard error, about the width that 19 of 20 draws stay within."""
+    plan = plan_builder.build()
+    optimum = replace(plan.strategies[0], chance_standard_error=error)
+    assert said in section(replace(plan, strategies=(optimum, *plan.strategies[1:])), 6)

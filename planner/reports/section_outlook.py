@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from planner.plan_record import ExampleFuture, Plan
 from planner.reports.blocks import Block, Bullets, Column, FanChart, Heading, LinesChart, NewPage, Table, Text
-from planner.reports.figures import DASH, Money, percent
+from planner.reports.figures import DASH, Money, number, percent
 from planner.reports.section_schedule import ages_cell, ages_words, chart_length, time_axis
 from planner.reports.section_year import bills_sentence, required_wording
 from planner.reports.wording import AFTER_TAX, BEFORE_TAX, LOW_MIDDLE_HIGH, futures_tested, someone
@@ -18,7 +18,7 @@ def how_it_could_go(plan: Plan) -> tuple[Block, ...]:
         NewPage(),
         Heading("How it could go", 1, 6),
         Text(bills_sentence(plan, plan.strategies[0])),
-        Text(futures_tested(plan.sources.n_paths, household.is_couple)),
+        Text(f"{futures_tested(plan.sources.n_paths, household.is_couple)} {_count_error(plan)}"),
         *required_wording(plan),
         Heading("Spending and savings by age"),
         _spending(plan),
@@ -33,6 +33,13 @@ def how_it_could_go(plan: Plan) -> tuple[Block, ...]:
         *_survivors(plan),
         *_long_lives(plan),
     )
+
+
+def _count_error(plan: Plan) -> str:
+    """Twice the standard error of the count of futures, in futures of 100."""
+    error = 200 * plan.strategies[0].chance_standard_error
+    size = f"about {number(error, 0)}" if error >= 1 else "less than 1"
+    return f"With other draws it could differ by {size} of 100."
 
 
 def _spending(plan: Plan) -> FanChart:

@@ -135,7 +135,7 @@ IMPORTANT_INFORMATION = (
         "Figures",
         "Projections are rounded because they are not known more finely. Chances come from a limited "
         "number of "
-        "futures and carry a small numerical error, given with them in the results file.",
+        "futures and carry a small numerical error: parts 6 and 7 say how large.",
     ),
 )
 
