@@ -38,7 +38,7 @@ from planner.optimum.duals import LARGEST_FACTOR, Expectation, Factors, YearChoi
 from planner.optimum.policy import OptimalPolicy
 from planner.piecewise import FloatArray
 from planner.problem import TAX_DEFERRED, TAX_FREE, TAXABLE, Decision, IntArray, Problem, State
-from planner.simulation import draw_scenarios
+from planner.simulation import Scenarios, draw_scenarios
 
 EMPTY = 1e-6  # share of wealth below which an account counts as empty
 LITTLE = 0.1  # essential years below which tax-free money is priced as read, at the cost of a slack
@@ -92,6 +92,7 @@ def prove(
     n_paths: int,
     generator: np.random.Generator,
     prices: PriceReader | None = None,
+    scenarios: Scenarios | None = None,
 ) -> Gap:
     """Bound and gap on drawn paths of the plan, under the solver's own node law.
 
@@ -99,6 +100,8 @@ def prove(
     ----------
     prices
         Raw prices; None = the solved value's slopes.
+    scenarios
+        Paths of the node law to use instead of drawing `n_paths`, for instance all there are.
     """
     reader = prices or PriceReader(policy)
     # Which of two ways to price around binding minimum distributions is tried on paths of its own, so
@@ -107,7 +110,7 @@ def prove(
         _Proof(problem, policy, reader, min(n_paths, PILOT_PATHS), child, follow).run().mean
         for child, follow in zip(generator.spawn(2), (False, True), strict=True)
     ]
-    return _Proof(problem, policy, reader, n_paths, generator, pilots[1] < pilots[0]).run()
+    return _Proof(problem, policy, reader, n_paths, generator, pilots[1] < pilots[0], scenarios).run()
 
 
 class _Proof:
@@ -121,11 +124,13 @@ class _Proof:
         n_paths: int,
         generator: np.random.Generator,
         follow_minimum: bool,
+        scenarios: Scenarios | None = None,
     ) -> None:
         self.problem, self.policy, self.prices = problem, policy, prices
         self.follow_minimum = follow_minimum
-        self.n_paths = n_paths
-        scenarios = draw_scenarios(problem, n_paths, generator, law="nodes")
+        if scenarios is None:
+            scenarios = draw_scenarios(problem, n_paths, generator, law="nodes")
+        self.n_paths = scenarios.n_paths
         assert scenarios.node is not None
         self.status, self.node = scenarios.status.astype(np.int64), scenarios.node.astype(np.int64)
         gross = problem.gross
