@@ -28,6 +28,9 @@ from planner.diagnostics import PlannerError
 _MOST_STARTS = 3
 """Executors in a row that may break before any client is finished."""
 
+PATIENCE = "10s"
+"""How long a scheduler may take to answer."""
+
 
 @dataclass(frozen=True, slots=True)
 class Engine:
@@ -180,7 +183,7 @@ def dask_cluster(address: str) -> Iterator[Engine]:
         )
     distributed: Any = import_module("distributed")  # has no types that a check could use
     try:
-        client = distributed.Client(address, timeout="10s", set_as_default=False)
+        client = distributed.Client(address, timeout=PATIENCE, set_as_default=False)
     except (OSError, ValueError) as error:
         raise PlannerError(f"no scheduler answers at {address}: {error}") from None
     with client:
