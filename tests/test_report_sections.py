@@ -95,7 +95,7 @@ def test_a_draft_says_which_texts_are_missing():
 def test_without_proof_no_claim_is_made():
     text = section(plan_builder.build(proof=None), 9)
     assert "was not computed" in text
-    assert "%" not in text.split("Check:")[0]
+    assert "%" not in text.split("Check")[0]
 
 
 def test_without_what_ifs_the_part_says_so():

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from planner.plan_record import Plan, StrategyResult
-from planner.reports.blocks import Block, Column, CostChart, Heading, Table, Text
+from planner.reports.blocks import Block, Column, CostChart, Facts, Heading, Table, Text
 from planner.reports.figures import MINUS, Money, capitalised, number, percent
 from planner.reports.section_year import required_wording
 from planner.reports.wording import PROOF_FOR_ANALYSTS, RULES_INTRODUCTION, WORTH_STEADY, futures_tested
@@ -192,41 +192,33 @@ def how_close(plan: Plan) -> tuple[Block, ...]:
     """Part 9: the bound, in one sentence for the client and a line for the analyst."""
     heading = Heading("How close to the best possible", 1, 9)
     if plan.proof is None:
-        return (
-            heading,
-            Text(
-                "The proof of how close this plan is to the best possible was not computed, so we make "
-                "no claim about "
-                "it here."
-            ),
-            _check(plan),
+        text = (
+            "The proof of how close this plan is to the best possible was not computed, so we make no claim "
+            "about it here."
         )
+        return (heading, Text(text), Facts((_check(plan),)))
     money, proof = Money(plan.household.currency), plan.proof
-    terms = "; ".join(f"{name} {percent(value, 3)}" for name, value in proof.terms)
+    # The bound is above the plan's value by what a loss of `gap_money` would take from it.
+    sentence = (
+        "On these assumptions, even the best possible way of spending, withdrawing and investing in the "
+        f"portfolios of part 10 could gain you no more than a loss of {money.about(proof.gap_money)} of your "
+        f"savings ({percent(proof.gap_share, 2)} of what you have) would cost you. This says nothing about "
+        "whether the assumptions are right."
+    )
     analyst = (
-        f"For analysts: gap {percent(proof.gap_share, 3)} of savings (standard error "
+        f"Gap {percent(proof.gap_share, 3)} of savings (standard error "
         f"{percent(proof.gap_standard_error, 3)}). {PROOF_FOR_ANALYSTS}"
     )
-    if terms:
+    if proof.terms:
+        terms = "; ".join(f"{name} {percent(value, 3)}" for name, value in proof.terms)
         analyst += f" By term, share of savings: {terms}."
+    return (heading, Facts((("For you", sentence), ("For analysts", analyst), _check(plan))))
+
+
+def _check(plan: Plan) -> tuple[str, str]:
     return (
-        heading,
-        Text(
-            "On these assumptions, no way of spending, withdrawing and investing in the portfolios of "
-            "part 10 could have been worth "
-            f"more to you than this plan with {money.about(proof.gap_money)} more savings "
-            f"({percent(proof.gap_share, 2)} of what you have)."
-        ),
-        Text("This says nothing about whether the assumptions are right."),
-        Text(analyst, "note"),
-        _check(plan),
-    )
-
-
-def _check(plan: Plan) -> Text:
-    return Text(
-        "Check: the plan followed through the futures tested was worth "
-        f"{percent(plan.value_share_simulated, 2)} of what the "
-        "calculation backwards from the end of life had promised; about 100% is right.",
-        "note",
+        "Check",
+        "The plan followed through the futures tested was worth "
+        f"{percent(plan.value_share_simulated, 2)} of what the calculation backwards from the end of life "
+        "had promised; about 100% is right.",
     )
