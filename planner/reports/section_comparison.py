@@ -201,8 +201,8 @@ def how_close(plan: Plan) -> tuple[Block, ...]:
     # The bound is above the plan's value by what a loss of `gap_money` would take from it.
     sentence = (
         "On these assumptions, even the best possible way of spending, withdrawing and investing in the "
-        f"portfolios of part 10 could gain you no more than a loss of {money.about(proof.gap_money)} of your "
-        f"savings ({percent(proof.gap_share, 2)} of what you have) would cost you. This says nothing about "
+        f"portfolios of part 10 could gain you no more than a loss of about {money.about(proof.gap_money)} of "
+        f"your savings ({percent(proof.gap_share, 2)} of what you have) would cost you. This says nothing about "
         "whether the assumptions are right."
     )
     analyst = (
