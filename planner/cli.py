@@ -9,7 +9,7 @@ from __future__ import annotations
 import os
 import signal
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, TypeVar
@@ -21,6 +21,7 @@ from rich.markup import escape
 from planner.diagnostics import Diagnostic, InputError, PlannerError
 
 if TYPE_CHECKING:
+    from planner.commands.answers import Answer
     from planner.plan import PlanSettings
 
 app = typer.Typer(
@@ -227,7 +228,10 @@ def plan(
 def compare(
     client: ClientWorkbook,
     rule: Annotated[
-        list[str] | None, typer.Option(metavar="KEY", help="Only this rule of thumb; repeatable.")
+        list[str] | None,
+        typer.Option(
+            metavar="KEY[:TERM=VALUE]", help="Only this rule, such as constant-real:rate=4.5%; repeatable."
+        ),
     ] = None,
     what_if: Annotated[
         list[str] | None,
@@ -236,56 +240,59 @@ def compare(
             help="Change a cell, such as 'Income/State pension/From age=70'; repeatable.",
         ),
     ] = None,
+    together: Annotated[bool, typer.Option("--together", help="Make one change of all --what-if.")] = False,
+    own_what_ifs: Annotated[
+        bool, typer.Option("--what-ifs", help="The workbook's own what-ifs, each beside the original.")
+    ] = False,
+    stresses: Annotated[bool, typer.Option("--stresses", help="If it goes otherwise: stress tests.")] = False,
+    pension_cut_year: Annotated[
+        int | None,
+        typer.Option(metavar="YEAR", help="For --stresses: state pensions a fifth lower from then."),
+    ] = None,
+    decisions: Annotated[
+        bool,
+        typer.Option(
+            "--decisions", help="Search: start of pensions, annuity, conversions, portfolio, working longer."
+        ),
+    ] = False,
+    history: Annotated[
+        bool, typer.Option("--history", help="Every start year of the sheet History, worst and middle named.")
+    ] = False,
+    bootstrap: Annotated[
+        bool, typer.Option("--bootstrap", help="Compare in years drawn in blocks from the sheet History.")
+    ] = False,
+    risk: Annotated[bool, typer.Option("--risk", help="The plan for a ladder of risk aversion.")] = False,
+    legacy: Annotated[
+        bool, typer.Option("--legacy", help="The plan for a ladder of wishes to leave.")
+    ] = False,
     as_json: Annotated[bool, typer.Option("--json", help="Print for other programs.")] = False,
     futures: Futures = None,
     seed: Seed = None,
 ) -> None:
-    """Compare the plan with rules of thumb, or with the plan for a changed client."""
+    """Compare the plan with rules of thumb, with changed clients, with what could happen."""
     with reporting_errors():
-        from dataclasses import replace
-
-        from planner.plan import compare as compare_household
-        from planner.plan import rule_key
-        from planner.reports.terminal import comparison, side_by_side
-        from planner.scenarios import changed, parse_change
+        from planner.commands.comparing import Views, answer
         from planner.workbook.reading import read_workbook
 
-        keys = _every(rule_key, rule or [])
-        changes = _every(parse_change, what_if or [])
-        read = read_workbook(client)
-        other = changed(read, changes) if changes else None
-        errors = Console(stderr=True, highlight=False)
-        for warning in (read if other is None else other).warnings:
-            print_problem(warning, errors)
-        settings = replace(_settings(futures, seed), rules=tuple(keys) or None)
-        with _progress(errors, False) as progress:
-            part = 1.0 if other is None else 0.5
-            before = compare_household(read.household, settings, lambda s, what: progress(part * s, what))
-            after = None
-            if other is not None:
-                after = compare_household(
-                    other.household, settings, lambda s, what: progress(0.5 + 0.5 * s, what)
-                )
-        if as_json:
-            from planner.reports.export import comparison_json, json_text
-
-            typer.echo(json_text(comparison_json(before, after, changes)), nl=False)
-            return
-        out = _output()
-        currency = read.household.currency
-        if after is None:
-            out.print(comparison(before.strategies, currency, before.solved.problem.wealth, out.width))
-            return
-        out.print(side_by_side(before.strategies, after.strategies, currency, what_if or []))
-        out.print("\nThe changed client:", style="bold")
-        out.print(
-            comparison(
-                after.strategies,
-                after.solved.household.currency,
-                after.solved.problem.wealth,
-                out.width,
-            )
+        views = Views(
+            rules=tuple(rule or ()),
+            what_ifs=tuple(what_if or ()),
+            together=together,
+            own_what_ifs=own_what_ifs,
+            stresses=stresses,
+            decisions=decisions,
+            history=history,
+            risk=risk,
+            legacy=legacy,
+            bootstrap=bootstrap,
+            pension_cut_year=pension_cut_year,
+            futures=futures,
         )
+        errors = Console(stderr=True, highlight=False)
+        read = read_workbook(client)
+        with _progress(errors, False) as progress:
+            found = answer(read, views, _settings(futures, seed), progress, _warner(errors))
+        _show(found, as_json)
 
 
 @app.command()
@@ -348,14 +355,54 @@ def clients(
 
 
 @app.command()
-def tables() -> None:
+def tables(
+    as_json: Annotated[bool, typer.Option("--json", help="Print for other programs.")] = False,
+) -> None:
     """List the life tables and tax rules that come with the program, each with source and year."""
     with reporting_errors():
         from planner import mortality, taxes
         from planner.reports.terminal import shipped_tables
 
+        if as_json:
+            import json
+            from dataclasses import asdict
+
+            record = {
+                "life_tables": [asdict(table) for table in mortality.describe()],
+                "tax_rules": [asdict(rules) for rules in taxes.describe()],
+            }
+            typer.echo(json.dumps(record, indent=2, ensure_ascii=False))
+            return
         out = _output()
         out.print(shipped_tables(mortality.describe(), taxes.describe(), out.width))
+
+
+def _warner(errors: Console) -> Callable[[Sequence[Diagnostic]], None]:
+    """Return a function that prints warnings, each once."""
+    seen: set[Diagnostic] = set()
+
+    def warn(warnings: Sequence[Diagnostic]) -> None:
+        for warning in warnings:
+            if warning not in seen:
+                print_problem(warning, errors)
+                seen.add(warning)
+
+    return warn
+
+
+def _show(found: Answer, as_json: bool) -> None:
+    """Print an answer: JSON, or its blocks with a blank line between them."""
+    if as_json:
+        from planner.reports.export import json_text
+
+        typer.echo(json_text(found.data), nl=False)
+        return
+    out = _output()
+    plain = not out.encoding.casefold().startswith("utf")
+    for number, block in enumerate(found.blocks):
+        if number:
+            out.print()
+        out.print(block(out.width, plain))
 
 
 def _output() -> Console:
@@ -433,9 +480,14 @@ def _progress(console: Console, verbose: bool) -> Iterator[Callable[[float, str]
 
         yield say
     elif console.is_terminal:
-        from rich.progress import BarColumn, Progress, TextColumn
+        from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 
-        columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:>3.0f}%"))
+        columns = (
+            TextColumn("{task.description}"),
+            BarColumn(),
+            TextColumn("{task.percentage:>3.0f}%"),
+            TimeRemainingColumn(compact=True),
+        )
         with Progress(*columns, console=console, transient=True) as bar:
             task = bar.add_task("reading", total=1.0)
             yield lambda share, what: bar.update(task, completed=share, description=escape(what))

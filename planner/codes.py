@@ -147,6 +147,9 @@ HOUSEHOLD_CODES: Final[dict[str, str]] = {
     "probability-range": "a chance of dying outside 0 to 1",
     "history-years": "years of the history not ascending one by one",
     "history-shape": "not one return for each asset class and year",
+    "account-unknown": "no account has that name",
+    "annuity-rate-range": "an annuity's yearly amount not above 0, or above its price",
+    "rule-parameter": "a spending rule's parameter that is unknown or outside its limits",
 }
 
 CODES: Final[dict[str, str]] = FILE_CODES | CELL_CODES | ADDRESS_CODES | HOUSEHOLD_CODES

@@ -232,6 +232,30 @@ class OwnLifeTable:
 
 
 @dataclass(frozen=True, slots=True)
+class AnnuityQuote:
+    """An annuity for life that could be bought now: `rate` a year for each unit of its price.
+
+    `account` is the name of the account it would be bought from.
+    """
+
+    owner: str
+    account: str
+    rate: float
+    rise: Rise = Rise("fixed", 0.0)
+    continues_to_partner: float | Literal["larger of the two"] = 0.0
+    taxable_share: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class RuleSetting:
+    """A parameter of a spending rule set other than as published (see `planner.rule_terms`)."""
+
+    rule: str
+    parameter: str
+    value: float
+
+
+@dataclass(frozen=True, slots=True)
 class WhatIf:
     """One named what-if: (address, new value as typed) pairs, in the workbook's own words."""
 
@@ -312,6 +336,8 @@ class Household:
     portfolios: tuple[Portfolio, ...]
     incomes: tuple[Income, ...] = ()
     start_choices: tuple[StartChoice, ...] = ()
+    annuity_quote: AnnuityQuote | None = None
+    rule_settings: tuple[RuleSetting, ...] = ()
     one_offs: tuple[OneOff, ...] = ()
     preferences: Preferences = Preferences()
     adviser_fee: float = 0.0

@@ -23,6 +23,7 @@ from planner.household import (
     Person,
     risk_aversion_from_gambles,
 )
+from planner.rule_terms import RULE_TERMS
 
 # ISO 4217 list one, active national currencies (from memory, 2025).
 CURRENCIES = frozenset(
@@ -46,6 +47,7 @@ def household_problems(household: Household) -> Iterator[Diagnostic]:
     yield from _spending(household)
     yield from _preferences(household)
     yield from assumption_problems(household)
+    yield from _quote_and_rules(household)
     yield from _records(household)
     yield from _means(household)
 
@@ -355,6 +357,30 @@ def _preferences(household: Household) -> Iterator[Diagnostic]:
     yield from amount("preferences.wish_to_leave", wishes.wish_to_leave)
     heirs = wishes.heirs_tax_rate
     yield from between("preferences.heirs_tax_rate", heirs, 0, 1 - 1e-9, "heirs-tax-range")
+
+
+def _quote_and_rules(household: Household) -> Iterator[Diagnostic]:
+    quote = household.annuity_quote
+    if quote is not None:
+        yield from _own_owner(quote.owner, "annuity_quote.owner", household)
+        yield from between("annuity_quote.rate", quote.rate, 0, 1, "annuity-rate-range", open_low=True)
+        names = [account.name for account in household.accounts]
+        if quote.account not in names:
+            hint = near_miss(quote.account, names, "accounts are")
+            message = f"no account is called {quote.account!r}; {hint}"
+            yield Diagnostic("account-unknown", "annuity_quote.account", message)
+        if isinstance(quote.continues_to_partner, str):
+            message = "an annuity goes on to a partner as a share; 'larger of the two' is for state pensions"
+            yield Diagnostic("continuation-kind", "annuity_quote.continues_to_partner", message)
+        else:
+            path = "annuity_quote.continues_to_partner"
+            yield from between(path, quote.continues_to_partner, 0, 1, "share-range")
+        yield from between("annuity_quote.taxable_share", quote.taxable_share, 0, 1, "share-range")
+    terms = {(term.rule, term.parameter): term for term in RULE_TERMS}
+    for setting in household.rule_settings:
+        path = f"rules.{setting.rule}.{setting.parameter}"
+        term = terms[setting.rule, setting.parameter]
+        yield from between(path, setting.value, term.low, term.high, "rule-parameter")
 
 
 def _records(household: Household) -> Iterator[Diagnostic]:

@@ -202,6 +202,48 @@ def wealth_cost(value_at_scale: Callable[[float], float], difference: float, wea
     return (1 - float(scale)) * wealth
 
 
+BILLS, TOO_LITTLE_EARLY, TOO_LITTLE_LATE, LEAVES_LESS = (
+    "bills",
+    "too little early",
+    "too little late",
+    "estate",
+)
+"""Reasons of `main_loss`."""
+
+
+def main_loss(problem: Problem, best: Paths, other: Paths, early_years: int = 10) -> str:
+    """Where a strategy loses most of what it is worth less than another on the same drawn years.
+
+    Losses of discounted utility are summed over paths and years in which the other strategy
+    spends less: where it is below essential spending (`BILLS`), else in the first `early_years`
+    (`TOO_LITTLE_EARLY`) or after them (`TOO_LITTLE_LATE`); and over estates that are smaller
+    (`LEAVES_LESS`). What it gains elsewhere is not netted.
+
+    Returns
+    -------
+    str
+        The reason with the largest sum; "" where nothing is lost.
+    """
+    need = need_on_paths(problem, best)
+    losses = dict.fromkeys((BILLS, TOO_LITTLE_EARLY, TOO_LITTLE_LATE, LEAVES_LESS), 0.0)
+    for t in range(best.n_years):
+        here = np.flatnonzero(best.alive[:, t] & (other.spending[:, t] < best.spending[:, t]))
+        n = need[here, t]
+        value = problem.utility.value
+        lost = value(best.spending[here, t] / n) - value(other.spending[here, t] / n)
+        lost = problem.discount**t * n * lost
+        short = other.spending[here, t] < n * problem.utility.essential - HALF_CENT
+        losses[BILLS] += float(lost[short].sum())
+        losses[TOO_LITTLE_EARLY if t < early_years else TOO_LITTLE_LATE] += float(lost[~short].sum())
+    if problem.estate.wanted:
+        lost = problem.estate.value(best.estate) - problem.estate.value(other.estate)
+        losses[LEAVES_LESS] = float(
+            (problem.discount ** (best.death_year + 1.0) * np.maximum(lost, 0.0)).sum()
+        )
+    reason = max(losses, key=lambda key: losses[key])
+    return reason if losses[reason] > 0 else ""
+
+
 # Essential spending -----------------------------------------------------------------------------
 
 

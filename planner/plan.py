@@ -37,6 +37,7 @@ from planner.projection import (
     strategy_result,
 )
 from planner.proof import proof
+from planner.rule_terms import RuleSettings
 from planner.rules import RULES, Rule, rules_for
 from planner.scenarios import plan_what_ifs
 from planner.simulation import Paths, Scenarios, draw_scenarios, simulate
@@ -68,6 +69,11 @@ class PlanSettings:
         Grids; what-ifs differ from the plan by what coarser grids say of both (see `_what_ifs`).
     rules : tuple of str or None
         Keys of the rules to compare with; None = all.
+    late_years : bool
+        Also simulate the years that few lives reach (see `projection.late_years`); without, their
+        percentiles may be missing (NaN).
+    rule_parameters : tuple of (key, ((parameter, value), ...))
+        Set for this run, over those of the workbook.
     what_ifs : bool
         Also solve the what-ifs, each a changed household.
     """
@@ -80,6 +86,8 @@ class PlanSettings:
     what_if_solver: SolverSettings = SolverSettings(12, 12, 8, 48)  # noqa: RUF009
     rules: tuple[str, ...] | None = None
     what_ifs: bool = True
+    late_years: bool = True
+    rule_parameters: RuleSettings = ()
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -108,7 +116,7 @@ def solve_household(
         return float(policy.value(scale * problem.opening[None, :], 0, 0)[0])
 
     yardstick = Yardstick(outcomes.path_utilities(problem, paths), value_at_scale)
-    late = late_years(problem, policy, paths, settings.seed)
+    late = late_years(problem, policy, paths, settings.seed) if settings.late_years else None
     return Solved(household, problem, policy, scenarios, paths, late, yardstick)
 
 
@@ -145,22 +153,37 @@ def compare(household: Household, settings: PlanSettings, progress: Progress | N
     """Compare the optimum with the rules that the settings ask for; see `compare_strategies`."""
     report = progress or (lambda share, what: None)
     solved = solve_household(household, settings, progress=lambda s: report(0.6 * s, "finding the best plan"))
-    strategies = compare_strategies(
-        solved, settings, lambda s: report(0.6 + 0.4 * s, "testing rules of thumb")
-    )
+    strategies = strategies_in(solved, settings, lambda s: report(0.6 + 0.4 * s, "testing rules of thumb"))
     return Comparison(solved, strategies)
+
+
+def strategies_in(
+    solved: Solved, settings: PlanSettings, progress: Callable[[float], None] | None = None
+) -> tuple[StrategyResult, ...]:
+    """`compare_strategies`, with the band of no change after the optimum where all rules are asked for."""
+    strategies = compare_strategies(solved, settings, progress)
+    if settings.rules is not None:
+        return strategies
+    banded = KeepWithinBand(solved.policy, NO_CHANGE_TOLERANCE)
+    return (strategies[0], _simulated(solved, banded, banded.key, settings), *strategies[1:])
 
 
 def _simulated(solved: Solved, policy: Policy, key: str, settings: PlanSettings) -> StrategyResult:
     paths = simulate(solved.problem, policy, solved.scenarios)
-    late = late_years(solved.problem, policy, paths, settings.seed)
-    return strategy_result(solved.problem, policy, key, paths, late, solved.yardstick)
+    late = late_years(solved.problem, policy, paths, settings.seed) if settings.late_years else None
+    result = strategy_result(solved.problem, policy, key, paths, late, solved.yardstick)
+    return replace(result, reason=outcomes.main_loss(solved.problem, solved.paths, paths))
 
 
 def chosen_rules(solved: Solved, settings: PlanSettings) -> tuple[Rule, ...]:
     """Rules that the settings ask for; they hold the portfolio the optimum holds in the first year."""
     portfolio = int(solved.paths.portfolio[0, 0])
-    rules = rules_for(solved.problem, portfolio, solved.household.spending.wanted)
+    parameters: dict[str, dict[str, float]] = {}
+    for setting in solved.household.rule_settings:
+        parameters.setdefault(setting.rule, {})[setting.parameter] = setting.value
+    for rule, values in settings.rule_parameters:
+        parameters.setdefault(rule, {}).update(values)
+    rules = rules_for(solved.problem, portfolio, solved.household.spending.wanted, settings=parameters)
     if settings.rules is None:
         return rules
     wanted = [rule_key(name) for name in settings.rules]

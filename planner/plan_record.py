@@ -142,6 +142,7 @@ class StrategyResult:
     tax_paid: float  # mean total over life
     spending: FloatArray  # (3, n_years): p10, p50, p90 by year
     balance: FloatArray  # (3, n_years)
+    reason: str = ""  # where most of its cost comes from, see `outcomes.main_loss`
 
 
 @dataclass(frozen=True, slots=True)

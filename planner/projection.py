@@ -54,6 +54,21 @@ def people_alive(problem: Problem) -> FloatArray:
     return np.column_stack([chance[:, 0] + chance[:, 1], chance[:, 0] + chance[:, 2], anyone])
 
 
+def later_ages(problem: Problem) -> tuple[tuple[int, int], ...]:
+    """Up to three ages of the first person to show figures at: pairs of age and year t.
+
+    Multiples of five, from five years on to the last year in which someone is alive with a chance
+    of at least one in four; where there are more than three, the first, a middle and the last.
+    """
+    ages = problem.ages[0]
+    last = int(np.flatnonzero(chances_alive(problem).sum(axis=1) >= 0.25)[-1])
+    fives = [(int(ages[t]), t) for t in range(min(5, last), last + 1) if ages[t] % 5 == 0]
+    if not fives:
+        return ((int(ages[last]), last),)
+    places = np.unique(np.round(np.linspace(0, len(fives) - 1, 3)).astype(int))
+    return tuple(fives[i] for i in places)
+
+
 def given_a_long_life(problem: Problem) -> Problem:
     r"""Return the same problem with lives drawn on the condition that someone opens the last year.
 

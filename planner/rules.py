@@ -9,7 +9,8 @@ no amount. Defaults are the parameters under which the published formulas are te
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
 from typing import ClassVar, Protocol
 
 import numpy as np
@@ -221,6 +222,93 @@ class Divisor:
 
 
 @dataclass(frozen=True, slots=True)
+class Smoothing:
+    """S_t = lam S_{t-1} (1 + i) + (1 - lam) x B_t, as endowments do; S_0 = x B_0.
+
+    Defaults are those remembered of a university endowment (lam 0.8; x 5 %), from memory.
+    """
+
+    portfolio: int
+    rate: float = 0.05
+    weight: float = 0.8
+
+    key: ClassVar[str] = "smoothing"
+    name: ClassVar[str] = "smoothing as endowments do"
+    reference: ClassVar[str] = (
+        "Swensen, D. F. (2009), Pioneering Portfolio Management, Free Press, on spending policy; after "
+        "Tobin, J. (1974), What Is Permanent Endowment Income?, American Economic Review 64(2) 427-432 "
+        "(both from memory)"
+    )
+    n_memory: ClassVar[int] = 1
+
+    def decide(self, problem: Problem, t: int, state: State) -> Decision:
+        """Memory: last year's amount, real (prices carry it on)."""
+        target = self.rate * state.wealth
+        amount = target if t == 0 else self.weight * state.memory[:, 0] + (1 - self.weight) * target
+        return _withdrawing(problem, t, state, amount, self.portfolio, amount[:, None])
+
+
+@dataclass(frozen=True, slots=True)
+class Falling:
+    """w_0 = x B_0, then with prices less a real fall d every year: w_t = x B_0 (1 - d)^t CPI_t.
+
+    The published finding is that real spending falls by about d = 1 % a year with age; carrying it
+    into a withdrawal rule, and the first rate, are ours.
+    """
+
+    portfolio: int
+    rate: float = 0.045
+    fall: float = 0.01
+
+    key: ClassVar[str] = "falling"
+    name: ClassVar[str] = "spending falls with age"
+    reference: ClassVar[str] = (
+        "Blanchett, D. (2014), Exploring the Retirement Consumption Puzzle, Journal of Financial Planning "
+        "27(5) 34-42"
+    )
+    n_memory: ClassVar[int] = 1
+
+    def decide(self, problem: Problem, t: int, state: State) -> Decision:
+        """Memory: last year's real amount."""
+        amount = self.rate * state.wealth if t == 0 else (1 - self.fall) * state.memory[:, 0]
+        return _withdrawing(problem, t, state, amount, self.portfolio, amount[:, None])
+
+
+@dataclass(frozen=True, slots=True)
+class SecureFirst:
+    """Lifelong income and a reserve carry the bills; a percentage of what is above is spent too.
+
+    With the gap g_t = max(0, n_t E - income_t) between essential spending and income, the reserve
+    is R_t = sum_j g_{t+j} (1 + r)^-j to the last age of the youngest person alive, and the amount
+    w_t = min(B_t, g_t + x max(0, B_t - R_t)). Tax is left out of the reserve. The split into a
+    protected and a free part is as published; reserve and percentage in this form are ours.
+    """
+
+    portfolio: int
+    rate: float = 0.04
+    real_rate: float = 0.01
+    last_age: int = LAST_AGE
+
+    key: ClassVar[str] = "secure-first"
+    name: ClassVar[str] = "bills first, then a share"
+    reference: ClassVar[str] = (
+        "Dybvig, P. H. (1999), Using Asset Allocation to Protect Spending, Financial Analysts Journal "
+        "55(1) 49-62 (from memory)"
+    )
+    n_memory: ClassVar[int] = 0
+
+    def decide(self, problem: Problem, t: int, state: State) -> Decision:
+        """Needs no memory."""
+        gap = np.maximum(0.0, problem.need[t:] * problem.utility.essential - problem.income[t:])
+        ages = np.array([problem.ages[list(people), t:].min(axis=0) for people in living_people(problem)]).T
+        discount = (1 + self.real_rate) ** -np.arange(gap.shape[0])
+        reserve = (discount[:, None] * gap * (ages < self.last_age)).sum(axis=0)[state.status]
+        balance = state.wealth
+        amount = gap[0][state.status] + self.rate * np.maximum(0.0, balance - reserve)
+        return _withdrawing(problem, t, state, np.minimum(balance, amount), self.portfolio, state.memory)
+
+
+@dataclass(frozen=True, slots=True)
 class AsAsked:
     """Spend the wanted amount, times the need scale, after tax, until money is gone."""
 
@@ -240,7 +328,16 @@ class AsAsked:
 
 
 PublishedRule = (
-    ConstantReal | ConstantPercentage | FloorAndCeiling | DecisionRules | VirtualAnnuity | Divisor | AsAsked
+    ConstantReal
+    | ConstantPercentage
+    | FloorAndCeiling
+    | DecisionRules
+    | VirtualAnnuity
+    | Divisor
+    | Smoothing
+    | Falling
+    | SecureFirst
+    | AsAsked
 )
 
 RULES: tuple[type[PublishedRule], ...] = (
@@ -250,13 +347,20 @@ RULES: tuple[type[PublishedRule], ...] = (
     DecisionRules,
     VirtualAnnuity,
     Divisor,
+    Smoothing,
+    Falling,
+    SecureFirst,
     AsAsked,
 )
 """Every rule, in the order of comparison tables; each has `key`, `name` and `reference`."""
 
 
 def rules_for(
-    problem: Problem, portfolio: int, wanted: float | None = None, last_age: int = LAST_AGE
+    problem: Problem,
+    portfolio: int,
+    wanted: float | None = None,
+    last_age: int = LAST_AGE,
+    settings: Mapping[str, Mapping[str, float]] | None = None,
 ) -> tuple[Rule, ...]:
     """Return the rules in the order of `RULES`; "as asked" only where `wanted` is given.
 
@@ -268,6 +372,8 @@ def rules_for(
         Spending a year at need scale 1, after tax.
     last_age
         Of the youngest person; sets the horizon of the rules that have one.
+    settings
+        Parameters by rule key and attribute (see `rule_terms.RULE_TERMS`); others as published.
     """
     years = max(1, last_age - int(problem.ages[:, 0].min()))
     rules: list[Rule] = [
@@ -277,10 +383,21 @@ def rules_for(
         DecisionRules(portfolio, years=years),
         VirtualAnnuity(portfolio, last_age=last_age),
         Divisor(portfolio),
+        Smoothing(portfolio),
+        Falling(portfolio),
+        SecureFirst(portfolio, last_age=last_age),
     ]
     if wanted is not None:
         rules.append(AsAsked(portfolio, wanted))
-    return tuple(rules)
+    return tuple(_with_parameters(rule, (settings or {}).get(rule.key, {})) for rule in rules)
+
+
+def _with_parameters(rule: Rule, values: Mapping[str, float]) -> Rule:
+    """The rule with some parameters replaced; whole numbers stay whole."""
+    if not values:
+        return rule
+    typed = {name: int(v) if isinstance(getattr(rule, name), int) else v for name, v in values.items()}
+    return replace(rule, **typed)  # type: ignore[type-var]
 
 
 def living_people(problem: Problem) -> tuple[tuple[int, ...], ...]:

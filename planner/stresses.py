@@ -8,9 +8,10 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import replace
+from math import floor, inf
 
 from planner.diagnostics import InputError
-from planner.household import Household, OneOff, Person
+from planner.household import Household, Income, IncomeKind, OneOff, Person
 
 LOWER_RETURNS = 0.01
 """Taken off the expected return of every asset class a year."""
@@ -21,23 +22,57 @@ FASTER_PRICES = 0.01
 LONG_LIFE_AGE = 100
 """Age that everybody reaches in the stress of a long life."""
 
+PENSION_CUT = 0.20
+"""Share by which state pensions are cut in that stress."""
+
 FALL_AT_THE_START = 0.20
 """Share of all savings lost before the plan begins."""
 
 
-def lower_returns(household: Household) -> Household:
-    """Every asset class returns a point less a year."""
+def lower_returns(household: Household, by: float = LOWER_RETURNS) -> Household:
+    """Every asset class returns a point (or `by`, a share) less a year."""
     markets = household.markets
-    classes = tuple(
-        replace(c, expected_return=c.expected_return - LOWER_RETURNS) for c in markets.asset_classes
-    )
+    classes = tuple(replace(c, expected_return=c.expected_return - by) for c in markets.asset_classes)
     return replace(household, markets=replace(markets, asset_classes=classes))
 
 
-def faster_prices(household: Household) -> Household:
-    """Prices rise a point faster a year, and returns and level pensions do not make up for it."""
+def faster_prices(household: Household, by: float = FASTER_PRICES) -> Household:
+    """Prices rise a point (or `by`) faster a year; returns and level pensions do not make up for it."""
     markets = household.markets
-    return replace(household, markets=replace(markets, inflation=markets.inflation + FASTER_PRICES))
+    return replace(household, markets=replace(markets, inflation=markets.inflation + by))
+
+
+def state_pensions_cut(household: Household, year: int, by: float = PENSION_CUT) -> Household | None:
+    """State pensions are lower by a share from a calendar year on; None where there are none.
+
+    Each becomes two rows: as given until its owner's age in that year, and the smaller one after.
+    """
+    if not any(income.kind is IncomeKind.STATE_PENSION for income in household.incomes):
+        return None
+    people = {person.name: person for person in household.people}
+    years = max(0, year - household.plan_date.year)
+    rows: list[Income] = []
+    for income in household.incomes:
+        at = people[income.owner].age_on(household.plan_date) + years
+        if income.kind is not IncomeKind.STATE_PENSION or (income.to_age or inf) <= at:
+            rows.append(income)
+            continue
+        amount = income.amount * (1 - by)
+        if income.from_age >= at:
+            rows.append(replace(income, amount=amount))
+            continue
+        # Amounts that do not rise with prices are nominal at the first payment, so what the later row
+        # starts with is what the earlier one has risen to.
+        now = people[income.owner].age_on(household.plan_date)
+        risen = at - max(floor(income.from_age), now)
+        rate = {"prices": 0.0, "fixed": income.rise.rate}.get(
+            income.rise.kind, min(household.markets.inflation, income.rise.rate)
+        )
+        later = replace(
+            income, name=f"{income.name} ({year})", from_age=float(at), amount=amount * (1 + rate) ** risen
+        )
+        rows += [replace(income, to_age=float(at)), later]
+    return replace(household, incomes=tuple(rows))
 
 
 def long_life(household: Household) -> Household:

@@ -46,7 +46,7 @@ def test_what_if_shows_both_sides():
     change = "Spending/Essential spending a year=25000"
     result = run("compare", CLIENT, FEW, "--what-if", change, "--rule", "constant-real")
     assert result.exit_code == 0, result.output
-    assert change in result.stdout
+    assert change in result.stdout.replace("\n", "")
     for word in ("as given", "changed", "difference"):
         assert word in result.stdout
 

@@ -15,7 +15,8 @@ PACKAGE = Path(__file__).parents[1] / "planner"
 LAYERS = (
     ("planner.__main__",),
     ("planner.cli",),
-    ("planner.clients", "planner.review", "planner.snapshot"),
+    ("planner.commands",),
+    ("planner.clients",),
     (
         "planner.reports.pdf",
         "planner.reports.terminal",
@@ -23,6 +24,8 @@ LAYERS = (
         "planner.reports.protection",
     ),
     ("planner.reports",),
+    ("planner.decisions", "planner.history", "planner.ladders", "planner.review", "planner.snapshot"),
+    ("planner.surprises",),
     ("planner.plan",),
     ("planner.instructions", "planner.projection", "planner.proof"),
     ("planner.plan_record",),
@@ -42,7 +45,7 @@ LAYERS = (
     ("planner.tax_assessment",),
     ("planner.tax_provisions",),
     ("planner.household",),
-    ("planner.checks", "planner.codes", "planner.shipped", "planner.files"),
+    ("planner.checks", "planner.codes", "planner.shipped", "planner.files", "planner.rule_terms"),
     ("planner.piecewise", "planner.diagnostics", "planner.data"),
     ("planner",),
 )

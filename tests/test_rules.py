@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import csv
-from dataclasses import replace
+from dataclasses import fields, replace
 from pathlib import Path
 
 import numpy as np
 import pytest
-from builders import bracket_tax, couple_problem, plain_problem, single_problem
+from builders import bracket_tax, couple_problem, plain_problem, single_problem, utility_of
 from numpy.testing import assert_allclose
 
+from planner.diagnostics import InputError
 from planner.problem import Problem, State
+from planner.rule_terms import RULE_TERMS, parse_rule
 from planner.rules import (
     RULES,
     UNIFORM_LIFETIME_DIVISORS,
@@ -20,8 +22,11 @@ from planner.rules import (
     ConstantReal,
     DecisionRules,
     Divisor,
+    Falling,
     FloorAndCeiling,
     Rule,
+    SecureFirst,
+    Smoothing,
     VirtualAnnuity,
     rules_for,
 )
@@ -73,6 +78,28 @@ VECTORS: list[tuple[Rule, int, str, float]] = [
         "46499.45 54249.36 60397.62",
         1021082.14,
     ),
+    # The next three: the formulas of each class run by a few lines of plain Python, without the simulator.
+    (
+        Smoothing(1),
+        65,
+        "50000 51060 50652.91 49812.52 51284.86 51539.52 52750.04 53093.31 49929.91 "
+        "48394.36 48334.74 48565.85",
+        903690.85,
+    ),
+    (
+        Falling(1),
+        65,
+        "45000 45441 46336.19 47707.74 51009.11 52013.99 52523.73 52518.48 51993.29 "
+        "52502.83 53537.13 54326.81",
+        914195.69,
+    ),
+    (  # bills of 30,000 with prices and no income: the reserve runs over the problem's twelve years
+        SecureFirst(1),
+        65,
+        "56358.85 58548.42 53270.49 51532.73 56699.37 62520.28 69314.88 69398.52 58960.54 "
+        "61218.47 65831.32 68933.16",
+        731406.26,
+    ),
 ]
 
 
@@ -92,7 +119,11 @@ def test_published_amounts_to_the_cent(
 ) -> None:
     """Untaxed and uncharged, the split over accounts changes nothing."""
     problem = plain_problem(
-        12, opening=1e6 * np.array(accounts), ages=age + np.arange(12)[None, :], inflation=0.0
+        12,
+        opening=1e6 * np.array(accounts),
+        ages=age + np.arange(12)[None, :],
+        inflation=0.0,
+        utility=utility_of(essential=30_000.0),
     )
     paths = simulate(problem, rule, vector_scenarios(problem))
     price = np.cumprod(np.append(1.0, 1 + INFLATION))
@@ -100,6 +131,45 @@ def test_published_amounts_to_the_cent(
     expected = [float(amount) for amount in amounts.split()]
     assert_allclose(paths.spending[0] * price[:-1], expected, atol=0.005 + 1e-6, rtol=0)
     assert paths.estate[0] * price[-1] == pytest.approx(end, abs=0.005 + 1e-6)
+
+
+def test_terms_are_the_parameters_of_the_rules_with_their_defaults() -> None:
+    """The sheet Rules and the command line offer exactly what the classes take."""
+    for rule in RULES:
+        given = {f.name: f.default for f in fields(rule) if f.name not in ("portfolio", "divisors", "wanted")}
+        given = {name: default for name, default in given.items() if name not in ("years", "least_years")}
+        assert given == {t.parameter: t.default for t in RULE_TERMS if t.rule == rule.key}, rule.key
+        assert all(t.label.casefold().startswith(rule.name) for t in RULE_TERMS if t.rule == rule.key), (
+            rule.key
+        )
+
+
+def test_parameters_are_set_by_key_and_attribute() -> None:
+    problem = single_problem()
+    settings = {"constant-real": {"rate": 0.03}, "virtual-annuity": {"last_age": 95.0}}
+    rules = {rule.key: rule for rule in rules_for(problem, 1, settings=settings)}
+    assert rules["constant-real"] == ConstantReal(1, 0.03)
+    assert rules["virtual-annuity"] == VirtualAnnuity(1, last_age=95)
+
+
+def test_command_line_terms() -> None:
+    assert parse_rule("constant-real") == ("constant-real", {})
+    assert parse_rule("decision-rules:rate=5%,largest-raise=0.05") == (
+        "decision-rules",
+        {"rate": 0.05, "largest_raise": 0.05},
+    )
+    for text in ("constant-real:rat=4%", "constant-real:rate=4", "constant-real:rate=x", "divisor:rate=1%"):
+        with pytest.raises(InputError) as error:
+            parse_rule(text)
+        assert [problem.code for problem in error.value.diagnostics] == ["rule-parameter"]
+    assert "did you mean 'rate'" in str(_refused("constant-real:rat=4%"))
+    assert "did you mean 4%" in str(_refused("constant-real:rate=4"))
+
+
+def _refused(text: str) -> InputError:
+    with pytest.raises(InputError) as error:
+        parse_rule(text)
+    return error.value
 
 
 def all_rules(problem: Problem) -> list[Rule]:

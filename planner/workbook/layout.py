@@ -21,12 +21,14 @@ from planner.workbook.layout_client import (
     START_CHOICES,
 )
 from planner.workbook.layout_practice import (
+    ANNUITY_QUOTE,
     HISTORY,
     LAST_YEAR,
     LIFE_TABLE,
     MARKETS,
     PORTFOLIOS,
     PRACTICE,
+    RULES,
     TAX,
     WHAT_IFS,
 )
@@ -53,6 +55,7 @@ SHEETS: Final[tuple[Sheet, ...]] = (
     ACCOUNTS,
     INCOME,
     START_CHOICES,
+    ANNUITY_QUOTE,
     ONE_OFFS,
     SPENDING,
     MARKETS,
@@ -61,6 +64,7 @@ SHEETS: Final[tuple[Sheet, ...]] = (
     TAX,
     LIFE_TABLE,
     WHAT_IFS,
+    RULES,
     HISTORY,
     LAST_YEAR,
     PRACTICE,

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from planner.rule_terms import RULE_TERMS, RuleTerm
 from planner.workbook.fields import Field, Form, Kind, Sheet, Table, needed, optional
 from planner.workbook.layout_client import YES_NO
 
@@ -199,6 +200,74 @@ WHAT_IFS = Sheet(
     "What-ifs",
     "Changes to compare with the plan. Rows with the same name make one what-if.",
     (Table("what-ifs", "what_ifs", _WHAT_IFS_COLUMNS, blank_rows=12),),
+)
+
+_ANNUITY_FIELDS = (
+    optional(
+        "Paid a year, share of the price",
+        Kind.RATE,
+        "annuity_quote.rate",
+        "The quote: 6.1% = 6,100 a year for life, before tax, for 100,000 now.",
+        blank_means="no quote",
+    ),
+    optional(
+        "Paid to",
+        Kind.NAME,
+        "annuity_quote.owner",
+        "For that person's life.",
+        blank_means="the first person",
+        names_of="People/Person",
+    ),
+    optional(
+        "Bought from",
+        Kind.NAME,
+        "annuity_quote.account",
+        "The account that pays for it.",
+        blank_means="the first account",
+        names_of="Accounts/Account",
+    ),
+    optional(
+        "Yearly rise",
+        Kind.RISE,
+        "annuity_quote.rise",
+        "prices, none, 2%, or prices up to 2.5%.",
+        default="none",
+    ),
+    optional(
+        "Continues to partner",
+        Kind.CONTINUATION,
+        "annuity_quote.continues_to_partner",
+        "Share paid on.",
+        default="0",
+    ),
+    optional(
+        "Taxable share",
+        Kind.SHARE,
+        "annuity_quote.taxable_share",
+        "Share of it that is taxed.",
+        blank_means="as the tax rules treat annuities",
+    ),
+)
+
+ANNUITY_QUOTE = Sheet(
+    "Annuity quote",
+    "For 'how much to turn into an annuity': what a provider quotes today.",
+    (Form("annuity quote", _ANNUITY_FIELDS),),
+)
+
+_TERM_KINDS = {"share": Kind.RATE, "years": Kind.NUMBER, "age": Kind.AGE}
+
+
+def _as_published(term: RuleTerm) -> Field:
+    default = f"{100 * term.default:g}%" if term.kind == "share" else f"{term.default:g}"
+    kind = _TERM_KINDS[term.kind]
+    return optional(term.label, kind, f"rules.{term.rule}.{term.parameter}", "As published.", default=default)
+
+
+RULES = Sheet(
+    "Rules",
+    "The rules of thumb that the plan is compared with, in their own terms. Blank = as published.",
+    (Form("rules", tuple(_as_published(term) for term in RULE_TERMS)),),
 )
 
 _HISTORY_COLUMNS = (

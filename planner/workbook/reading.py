@@ -18,6 +18,7 @@ from planner.household import (
     JOINT,
     Account,
     AccountType,
+    AnnuityQuote,
     AssetClass,
     History,
     Household,
@@ -32,6 +33,7 @@ from planner.household import (
     Portfolio,
     Practice,
     Preferences,
+    RuleSetting,
     Spending,
     StartChoice,
     SurchargeStep,
@@ -63,6 +65,7 @@ _DEPENDS_ON: Final[dict[str, tuple[str, ...]]] = {
     "people-count": ("people.name",),
     "portfolio-unknown": ("portfolios.name",),
     "income-unknown": ("incomes.name",),
+    "account-unknown": ("accounts.name",),
     "year-past": ("plan_date",),
     "birth-date-future": ("plan_date",),
     "age-above-table": ("plan_date",),
@@ -375,11 +378,14 @@ class _Builder:
             top.setdefault(attribute, placeholder)
         top["tax_rules"] = top["tax_rules"].casefold()
         incomes = self.incomes(names)
+        accounts = self.accounts(names, holdings)
         parts: dict[str, Any] = top | {
             "people": tuple(replace(p, life_table=p.life_table.casefold()) for p in people),
-            "accounts": self.accounts(names, holdings),
+            "accounts": accounts,
             "incomes": incomes,
             "start_choices": self.start_choices([income.name for income in incomes]),
+            "annuity_quote": self.annuity_quote(names, [account.name for account in accounts]),
+            "rule_settings": self.rule_settings(),
             "one_offs": self.one_offs(),
             "spending": self.spending(),
             "markets": markets,
@@ -443,6 +449,23 @@ class _Builder:
     def start_choices(self, incomes: list[str]) -> tuple[StartChoice, ...]:
         rows = self.rows("Start choices", "start choices")
         return tuple(StartChoice(**row | {"income": self.same(row["income"], incomes)}) for row in rows)
+
+    def annuity_quote(self, people: list[str], accounts: list[str]) -> AnnuityQuote | None:
+        """Return the quote, None where there is no rate; a blank person or account is the first."""
+        values = dict(self.values.get("annuity_quote", {}))
+        if "rate" not in values:
+            return None
+        values["owner"] = self.same(values.get("owner", people[0] if people else ""), people)
+        values["account"] = self.same(values.get("account", accounts[0] if accounts else ""), accounts)
+        return AnnuityQuote(**values)
+
+    def rule_settings(self) -> tuple[RuleSetting, ...]:
+        return tuple(
+            RuleSetting(group.removeprefix("rules."), parameter, value)
+            for group, values in self.values.items()
+            if group.startswith("rules.")
+            for parameter, value in values.items()
+        )
 
     def one_offs(self) -> tuple[OneOff, ...]:
         one_offs = []

@@ -12,7 +12,14 @@ from rich.table import Table
 from rich.text import Text
 
 from planner.diagnostics import Diagnostic
-from planner.household import AccountType, Household, Income, Portfolio
+from planner.household import (
+    AccountType,
+    Household,
+    Income,
+    Portfolio,
+    Preferences,
+    risk_aversion_from_gambles,
+)
 from planner.workbook.reading import ReadWorkbook
 
 
@@ -198,6 +205,19 @@ def _blocks(household: Household) -> Iterator[ConsoleRenderable]:
     yield from _wishes(household)
 
 
+def gamble_words(wishes: Preferences) -> str:
+    """The two answers about gambles with lifetime income, in words; "" where neither was given."""
+    third, second = wishes.accepts_third_cut, wishes.accepts_second_gamble
+    if third is None or second is None:
+        return ""
+    cut = "half" if third else "a fifth"
+    return (
+        f"The client {'would take' if third else 'would not take'} a job that doubles income for life or "
+        f"cuts it by a third at even odds, and {'would' if second else 'would not'} with a cut by {cut}: "
+        f"risk aversion {risk_aversion_from_gambles(third, second):g}, our number for people who answer so."
+    )
+
+
 def _wishes(household: Household) -> Iterator[ConsoleRenderable]:
     spending, wishes = household.spending, household.preferences
     lines = [
@@ -235,5 +255,7 @@ def _wishes(household: Household) -> Iterator[ConsoleRenderable]:
             ("moves to tax-free allowed", "yes" if wishes.conversions_allowed else "no"),
         ),
     )
+    if words := gamble_words(wishes):
+        yield Text(f"\n{words}")
     if household.practice.is_draft:
         yield Text("\nDRAFT - NOT FOR CLIENT: the sheet Practice is not complete.")
