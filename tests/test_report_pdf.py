@@ -17,6 +17,7 @@ from planner.household import Account, AccountType
 from planner.plan_record import NoChangeBand, Range
 from planner.reports.export import results_json
 from planner.reports.pdf import render_pdf, write_pdf
+from planner.reports.protection import protected
 from planner.reports.sections import SECTIONS
 from planner.reports.wording import DRAFT
 from planner.reports.year_money import year_money
@@ -125,6 +126,20 @@ def test_contents_name_the_page_on_which_each_part_starts(reader):
         assert entry.title in squeezed(reader.pages[number].extract_text())
 
 
+def test_a_password_changes_nothing_but_who_can_read_it(plan, reader):
+    document = PdfReader(io.BytesIO(protected(render_pdf(plan), "a long password")))
+    assert document.is_encrypted
+    assert document.trailer["/Encrypt"]["/R"] == 6  # AES-256 as in ISO 32000-2
+    assert not document.decrypt("another")
+    assert document.decrypt("a long password")
+    assert document.metadata.title == reader.metadata.title
+    assert document.trailer["/Root"]["/Lang"] == "en-US"
+    assert [e["/Title"] for e in document.outline if not isinstance(e, list)] == [
+        e["/Title"] for e in reader.outline if not isinstance(e, list)
+    ]
+    assert [p.extract_text() for p in document.pages] == [p.extract_text() for p in reader.pages]
+
+
 def test_same_plan_gives_the_same_bytes(plan):
     assert render_pdf(plan) == render_pdf(plan_builder.build())
 
@@ -140,6 +155,9 @@ def test_footer_names_client_adviser_workbook_version_and_page(reader):
             "Robin Sample, Example Planning Ltd",
             "9f2c9f2c",
             "0.1.0",
+            "Period life table 2022",
+            "federal income tax",
+            "seed 20260302",
         ):
             assert part in text
 

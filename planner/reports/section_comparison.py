@@ -201,9 +201,9 @@ def how_close(plan: Plan) -> tuple[Block, ...]:
     # The bound is above the plan's value by what a loss of `gap_money` would take from it.
     sentence = (
         "On these assumptions, even the best possible way of spending, withdrawing and investing in the "
-        f"portfolios of part 10 could gain you no more than a loss of about {money.about(proof.gap_money)} of "
-        f"your savings ({percent(proof.gap_share, 2)} of what you have) would cost you. This says nothing about "
-        "whether the assumptions are right."
+        "portfolios of part 10 could gain you no more than a loss of about "
+        f"{money.about(proof.gap_money)} of your savings ({percent(proof.gap_share, 2)} of what you have) "
+        "would cost you. This says nothing about whether the assumptions are right."
     )
     analyst = (
         f"Gap {percent(proof.gap_share, 3)} of savings (standard error "
