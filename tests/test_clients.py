@@ -602,10 +602,13 @@ def test_a_bar_with_done_failed_and_time_left_where_there_is_one():
 
 
 def test_summary_names_who_needs_a_call_first():
-    rows = tuple(by_urgency([A_ROW, SITUATIONS["bills cannot be paid this year"]]))
+    fallen = SITUATIONS["with 'fall' bills are cut in 4 of 10"]
+    rows = tuple(by_urgency([A_ROW, SITUATIONS["bills cannot be paid this year"], fallen]))
     console = Console(file=io.StringIO(), width=80, color_system=None)
     console.print(summary(ListResult(rows, 1, ())))
     text = console.file.getvalue()
     assert "Ada Alder" in text
     assert "bills cannot be paid this year: short by $10,000" in text
-    assert "2 clients: 2 planned (1 before)" in text
+    assert "3 clients: 3 planned (1 before)" in text
+    words = "With 'fall' bills are cut in at least 10% of futures for 1 of 1 clients; as planned for 0."
+    assert words in " ".join(text.split())

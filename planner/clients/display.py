@@ -12,7 +12,7 @@ from rich.table import Table
 from rich.text import Text
 
 from planner.clients.listing import ListResult, Watch
-from planner.clients.rows import ClientRow, reasons
+from planner.clients.rows import LIKELY_CUT, ClientRow, reasons
 
 _MOST_SHOWN = 10
 
@@ -91,8 +91,27 @@ def summary(result: ListResult) -> Group:
     blocks: list[Text | Table] = []
     if first:
         blocks += [_table(first), Text()]
+    blocks += [Text(line) for line in _changes(rows)]
     blocks.append(Text(f"{len(rows):,} client{'s' if len(rows) != 1 else ''}: {', '.join(parts)}"))
     return Group(*blocks)
+
+
+def _changes(rows: Sequence[ClientRow]) -> Iterator[str]:
+    """For each change asked for all: how many clients have to cut their bills likely enough to call."""
+    names = dict.fromkeys(figures.name for row in rows for figures in row.changed)
+    for name in names:
+        pairs = [
+            (row.chance_below_essential or 0.0, figures.chance_below_essential)
+            for row in rows
+            for figures in row.changed
+            if figures.name == name and figures.chance_below_essential is not None
+        ]
+        before = sum(chance >= LIKELY_CUT for chance, _ in pairs)
+        after = sum(chance >= LIKELY_CUT for _, chance in pairs)
+        yield (
+            f"With '{name}' bills are cut in at least {LIKELY_CUT:.0%} of futures for {after:,} of "
+            f"{len(pairs):,} clients; as planned for {before:,}."
+        )
 
 
 def _table(rows: Sequence[ClientRow]) -> Table:

@@ -158,7 +158,7 @@ def local_processes(workers: int) -> Iterator[Engine]:
         return ProcessPoolExecutor(workers, mp_context=context, initializer=start_worker)
 
     try:
-        yield Engine(start, lambda: workers + 1)
+        yield Engine(start, lambda: workers + workers // 4 + 1)
     except BaseException:
         for process in set(multiprocessing.active_children()) - before:
             process.terminate()
