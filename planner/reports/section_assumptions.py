@@ -7,7 +7,7 @@ from typing import Final
 
 from planner.household import Household, Portfolio
 from planner.plan_record import Plan
-from planner.reports.blocks import Block, Bullets, Column, Facts, Heading, NewPage, Table, Text
+from planner.reports.blocks import Block, Bullets, Column, Facts, Heading, Table, Text
 from planner.reports.figures import Money, percent
 from planner.reports.section_facts import tax_rules_words
 from planner.reports.wording import DRAFT
@@ -19,7 +19,6 @@ def costs_and_assumptions(plan: Plan) -> tuple[Block, ...]:
     """What the plan costs and what it rests on."""
     household = plan.household
     return (
-        NewPage(),
         Heading("Costs and assumptions", 1, 10),
         *_costs(plan),
         *_warnings(plan),
