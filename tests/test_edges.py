@@ -1,0 +1,165 @@
+"""Numbers at the edge: each household is solved, with finite and ordered results, or refused in words.
+
+Coarse grids: what is looked for is overflow, empty ranges and wrong order, not accuracy.
+"""
+
+from dataclasses import replace
+from datetime import date
+
+import numpy as np
+import pytest
+from households import MARKETS, couple, single
+
+from planner.diagnostics import InputError
+from planner.household import (
+    Account,
+    AccountType,
+    AssetClass,
+    Income,
+    IncomeKind,
+    MarketAssumptions,
+    OneOff,
+    Person,
+    Preferences,
+    Spending,
+)
+from planner.optimum.recursion import SolverSettings, solve
+from planner.problem_building import build_problem
+from planner.proof import proof
+from planner.simulation import draw_scenarios, simulate
+
+COARSE = SolverSettings(8, 8, 6, 32)
+N_PATHS = 200
+ROUNDING = 1e-9  # relative, of a value that must not fall
+LIN = Person("Lin", date(1945, 3, 3), "female", "us-ssa-2022")
+
+
+def of_age(*ages):
+    """People who turn these ages on the plan date, 1 January 2026."""
+    names = ("Lin", "Kim")
+    return tuple(
+        Person(name, date(2026 - age, 1, 1), "female", "us-ssa-2022")
+        for name, age in zip(names, ages, strict=False)
+    )
+
+
+def money(taxable=0.0, deferred=0.0, free=0.0):
+    kinds = (AccountType.TAXABLE, AccountType.TAX_DEFERRED, AccountType.TAX_FREE)
+    amounts = (taxable, deferred, free)
+    return tuple(Account(kind.value, "Lin", kind, x) for kind, x in zip(kinds, amounts, strict=True))
+
+
+def pension(amount):
+    return (Income("Pension", "Lin", IncomeKind.PENSION, amount, 65.0),)
+
+
+def every(**changes):
+    classes = tuple(replace(c, **changes) for c in MARKETS.asset_classes)
+    return MarketAssumptions(MARKETS.inflation, classes, MARKETS.correlations)
+
+
+def three(**changes):
+    """One person of 80 with three accounts and income tax."""
+    fields = {"accounts": money(100_000.0, 150_000.0, 50_000.0), "tax_rules": "us-federal-2026"}
+    return single(**{**fields, **changes})
+
+
+# A loaf for 300: everything in another unit. The currency's own tax rules would have to fit it.
+DEAR = {
+    "accounts": money(25e6),
+    "incomes": pension(1.4e6),
+    "spending": Spending(2e6),
+    "currency": "JPY",
+}
+EDGES = {
+    "no money": lambda: three(accounts=money()),
+    "no money, no income": lambda: three(accounts=money(), incomes=()),
+    "a cent": lambda: three(accounts=money(0.01)),
+    "a loaf costs 300": lambda: single(**DEAR),
+    "aged 99": lambda: three(people=of_age(99)),
+    "aged 118, the table's last but one": lambda: three(people=of_age(118)),
+    "ages 40 and 112": lambda: couple(
+        people=of_age(40, 112), accounts=money(300_000.0), incomes=(), one_offs=()
+    ),
+    "no volatility": lambda: three(markets=every(standard_deviation=0.0)),
+    "returns of -5 %": lambda: three(markets=every(expected_return=-0.05)),
+    "certain returns of -5 %": lambda: three(markets=every(expected_return=-0.05, standard_deviation=0.0)),
+    "risk aversion 0.5": lambda: three(preferences=Preferences(risk_aversion=0.5)),
+    "risk aversion 1": lambda: three(preferences=Preferences(risk_aversion=1.0)),
+    "risk aversion 20": lambda: three(preferences=Preferences(risk_aversion=20.0)),
+    "only taxable": lambda: three(accounts=money(taxable=300_000.0)[:1]),
+    "only tax-deferred": lambda: three(accounts=money(deferred=300_000.0)[1:2]),
+    "only tax-free": lambda: three(accounts=money(free=300_000.0)[2:]),
+    "no income": lambda: three(incomes=()),
+    "income far above needs": lambda: three(incomes=pension(1e6)),
+    "minimum distributions far above spending": lambda: three(
+        people=of_age(90), accounts=money(deferred=2e6), spending=Spending(5_000.0)
+    ),
+    "essentials above all means": lambda: three(spending=Spending(1e6)),
+    "a cost larger than wealth now": lambda: three(one_offs=(OneOff("Debt", 2026, -2e6),)),
+    "a cost larger than wealth later": lambda: three(one_offs=(OneOff("Debt", 2031, -2e6),)),
+    "a receipt larger than wealth": lambda: three(one_offs=(OneOff("Gift", 2028, 5e6),)),
+    "a wish larger than wealth": lambda: three(preferences=Preferences(wish_to_leave=5e6)),
+    "no room to choose": lambda: three(spending=Spending(20_000.0, 20_000.0, 20_000.0)),
+    "all cash kept aside": lambda: three(spending=Spending(20_000.0, cash_aside=100_000.0)),
+    "plan date in the past": lambda: three(plan_date=date(1999, 12, 31)),
+    "plan date in the future": lambda: three(plan_date=date(2040, 2, 29)),
+}
+
+
+@pytest.mark.parametrize("name", EDGES)
+def test_solved_with_finite_and_ordered_results(name):
+    problem = build_problem(EDGES[name]())
+    policy = solve(problem, COARSE)
+    paths = simulate(problem, policy, draw_scenarios(problem, N_PATHS, np.random.default_rng(1)))
+    for what in ("spending", "income", "tax", "withdrawal", "balances", "estate"):
+        assert np.isfinite(getattr(paths, what)).all(), what
+    assert (paths.balances >= 0.0).all()
+    assert (paths.tax >= -1e-9).all()
+    levels = [policy.level_spending(scale * problem.opening) for scale in (0.25, 0.5, 1.0, 2.0)]
+    assert np.isfinite(levels).all()
+    assert (np.diff(levels) >= -ROUNDING * np.abs(levels[1:])).all()  # more money is never worth less
+    rich = policy.level_spending(problem.opening + np.array([1_000.0, 0.0, 0.0]))
+    assert rich >= levels[2] - ROUNDING * abs(levels[2])
+
+
+PROVED = (
+    "no money",
+    "aged 99",
+    "no volatility",
+    "essentials above all means",
+    "a cost larger than wealth later",
+)
+
+
+@pytest.mark.parametrize("name", PROVED)
+def test_the_gap_stays_a_gap(name):
+    """The bound never lies below the plan, and is finite."""
+    problem = build_problem(EDGES[name]())
+    found = proof(problem, solve(problem, COARSE), 50, 1)
+    assert found is not None
+    assert np.isfinite([found.gap_money, found.gap_share]).all()
+    assert found.gap_money >= 0.0
+
+
+REFUSED = {
+    "aged 119, the table's end": (lambda: single(people=of_age(119)), "age-above-table"),
+    "not born yet": (lambda: single(people=of_age(-1)), "birth-date-future"),
+    "risk aversion 21": (lambda: single(preferences=Preferences(risk_aversion=21.0)), "risk-aversion-range"),
+    "risk aversion 0": (lambda: single(preferences=Preferences(risk_aversion=0.0)), "risk-aversion-range"),
+    "a balance below 0": (lambda: single(accounts=money(-1.0)), "amount-negative"),
+    "no essential spending": (lambda: single(spending=Spending(0.0)), "essential-not-positive"),
+    "a loss of everything": (
+        lambda: single(markets=MarketAssumptions(0.02, (AssetClass("A", -0.9, 0.1),), ((1.0,),))),
+        "rate-range",
+    ),
+}
+
+
+@pytest.mark.parametrize("name", REFUSED)
+def test_refused_in_words(name):
+    make, code = REFUSED[name]
+    with pytest.raises(InputError) as refused:
+        make()
+    assert code in {problem.code for problem in refused.value.diagnostics}
+    assert all(len(problem.message) > 10 for problem in refused.value.diagnostics)
