@@ -8,12 +8,14 @@ import plan_builder
 import pytest
 from reportlab.graphics.shapes import String
 
+from planner.household import AnnuityQuote, RuleSetting
+from planner.outcomes import BILLS, TOO_LITTLE_EARLY
 from planner.plan_record import NoChangeBand
 from planner.reports.blocks import Heading, OnePage, StackChart, Table, Text
 from planner.reports.charts import LAYERS, draw
 from planner.reports.section_year import band_sentence
 from planner.reports.sections import SECTIONS, report_blocks
-from planner.reports.wording import DRAFT, IMPORTANT_INFORMATION, LIMITS
+from planner.reports.wording import DRAFT, IMPORTANT_INFORMATION, LIMITS, REASONS
 
 
 def words(value):
@@ -184,3 +186,25 @@ def test_the_count_of_futures_says_its_own_error(error, said):
     plan = plan_builder.build()
     optimum = replace(plan.strategies[0], chance_standard_error=error)
     assert said in section(replace(plan, strategies=(optimum, *plan.strategies[1:])), 6)
+
+
+def test_rules_say_what_costs_most_and_what_is_not_as_published():
+    settings = (RuleSetting("constant-real", "rate", 0.035), RuleSetting("floor-and-ceiling", "down", 0.15))
+    plan = plan_builder.build(replace(plan_builder.couple(), rule_settings=settings))
+    first, second, third, *rest = plan.strategies
+    told = (first, replace(second, reason=BILLS), replace(third, reason=TOO_LITTLE_EARLY), *rest)
+    text = section(replace(plan, strategies=told), 7)
+    assert "What costs most" in text
+    assert REASONS[BILLS] in text
+    assert REASONS[TOO_LITTLE_EARLY] in text
+    assert "Same amount plus prices: first withdrawal 3.5% instead of 4%." in text
+    plain = section(plan_builder.build(), 7)
+    assert "What costs most" not in plain
+    assert "not as published" not in plain
+
+
+def test_a_quoted_annuity_stands_among_the_facts():
+    quote = AnnuityQuote("Maren Quill", "Joint brokerage", 0.061, continues_to_partner=0.5)
+    text = section(plan_builder.build(replace(plan_builder.couple(), annuity_quote=quote)), 2)
+    assert "$6,100 a year for each $100,000 paid from Joint brokerage" in text
+    assert "50% goes on to the partner" in text

@@ -6,7 +6,14 @@ from planner.plan_record import Plan, StrategyResult
 from planner.reports.blocks import Block, Column, CostChart, Facts, Heading, Table, Text
 from planner.reports.figures import MINUS, Money, capitalised, number, percent
 from planner.reports.section_year import required_wording
-from planner.reports.wording import PROOF_FOR_ANALYSTS, RULES_INTRODUCTION, WORTH_STEADY, futures_tested
+from planner.reports.wording import (
+    PROOF_FOR_ANALYSTS,
+    REASONS,
+    RULES_INTRODUCTION,
+    WORTH_STEADY,
+    futures_tested,
+)
+from planner.rule_terms import RULE_TERMS
 
 
 def compared_with_rules(plan: Plan) -> tuple[Block, ...]:
@@ -23,6 +30,7 @@ def compared_with_rules(plan: Plan) -> tuple[Block, ...]:
         _risks(plan),
         Text(futures_tested(plan.sources.n_paths, plan.household.is_couple), "note"),
         *required_wording(plan),
+        *_settings(plan),
         *_references(plan),
     ]
     return tuple(blocks)
@@ -81,6 +89,7 @@ def _values(plan: Plan, has_level: bool) -> Table:
 
 def _risks(plan: Plan) -> Table:
     money = Money(plan.household.currency)
+    explained = any(result.reason for result in plan.strategies)
     columns = (
         Column("", "left"),
         Column("Of 100 futures, bills not paid in"),
@@ -88,6 +97,7 @@ def _risks(plan: Plan) -> Table:
         Column("Years short", group="In those futures"),
         Column("First at age", group="In those futures"),
         Column("Largest yearly cut"),
+        *((Column("What costs most", "left"),) if explained else ()),
     )
     rows = []
     for result in plan.strategies:
@@ -101,6 +111,7 @@ def _risks(plan: Plan) -> Table:
                 "" if never else number(result.years_below_essential, 0),
                 "" if never or age is None else f"{round(age)}",
                 percent(result.largest_yearly_cut, 0),
+                *((REASONS.get(result.reason, ""),) if explained else ()),
             )
         )
     whose = f" of {plan.household.people[0].name}" if plan.household.is_couple else ""
@@ -110,6 +121,8 @@ def _risks(plan: Plan) -> Table:
         f"age: the middle age{whose} when it first happened. Largest yearly cut: the middle one over all "
         "futures."
     )
+    if explained:
+        note += " What costs most: where most of 'what this rule costs you' comes from."
     return Table(columns, tuple(rows), note, strong=(0,))
 
 
@@ -119,6 +132,20 @@ def _of_hundred(chance: float) -> str:
     if 0.995 <= chance < 1:
         return "over 99"
     return f"{round(100 * chance)}"
+
+
+def _settings(plan: Plan) -> tuple[Block, ...]:
+    """Parameters of rules that the workbook sets otherwise than published."""
+    labels = {(term.rule, term.parameter): term for term in RULE_TERMS}
+    items = []
+    for setting in plan.household.rule_settings:
+        term = labels[setting.rule, setting.parameter]
+        if setting.value != term.default:
+            show = percent if term.kind == "share" else number
+            items.append(f"{term.label} {show(setting.value, 2)} instead of {show(term.default, 2)}")
+    if not items:
+        return ()
+    return (Text(f"Set by your adviser, not as published: {'; '.join(items)}.", "note"),)
 
 
 def _references(plan: Plan) -> tuple[Block, ...]:

@@ -43,6 +43,7 @@ def what_you_told_us(plan: Plan) -> tuple[Block, ...]:
         *_incomes(household),
         *_one_offs(household),
         *_start_choices(household),
+        *_annuity_quote(household),
         Heading("Your spending"),
         Facts(tuple(_spending_rows(household))),
         Heading("What you would rather have"),
@@ -251,6 +252,24 @@ def _start_choices(household: Household) -> tuple[Block, ...]:
     )
     columns = (Column("Quoted income", LEFT), Column("If it starts", LEFT), Column(f"A year ({money.unit})"))
     return (Heading("When an income could start"), Table(columns, rows))
+
+
+def _annuity_quote(household: Household) -> tuple[Block, ...]:
+    quote = household.annuity_quote
+    if quote is None:
+        return ()
+    money = Money(household.currency)
+    share = quote.continues_to_partner
+    partner = "ends with that life"
+    if share:
+        partner = f"{share if isinstance(share, str) else percent(share, 0)} goes on to the partner"
+    taxed = "" if quote.taxable_share is None else f"; {percent(quote.taxable_share, 0)} of it taxable"
+    text = (
+        f"{money.exact(quote.rate * 100_000)} a year for each {money.exact(100_000)} paid from "
+        f"{quote.account}, before tax, for the life of {quote.owner}; rises: {rise_words(quote.rise)}; "
+        f"{partner}{taxed}. A quote to compare with, not part of this plan."
+    )
+    return (Heading("An annuity you could buy"), Text(text))
 
 
 def _spending_rows(household: Household) -> list[tuple[str, str]]:

@@ -8,6 +8,7 @@ and 13 Annex 2; own words; the rule texts themselves were not read).
 from __future__ import annotations
 
 from planner.household import AccountType, IncomeKind
+from planner.outcomes import BILLS, LEAVES_LESS, TOO_LITTLE_EARLY, TOO_LITTLE_LATE
 
 DRAFT = "DRAFT - NOT FOR CLIENT"
 
@@ -33,6 +34,13 @@ SUITABILITY_TEXTS = {
     "why_this_suits": "Why this suits",
     "drawbacks": "Drawbacks",
     "alternatives_considered": "Alternatives considered",
+}
+
+REASONS = {
+    BILLS: "bills are cut",
+    TOO_LITTLE_EARLY: "too little is spent early",
+    TOO_LITTLE_LATE: "too little is left to spend late",
+    LEAVES_LESS: "less is left for heirs",
 }
 
 ESTIMATES = "These are estimates, not promises."
