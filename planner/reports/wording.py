@@ -38,9 +38,9 @@ SUITABILITY_TEXTS = {
 
 REASONS = {
     BILLS: "bills are cut",
-    TOO_LITTLE_EARLY: "too little is spent early",
-    TOO_LITTLE_LATE: "too little is left to spend late",
-    LEAVES_LESS: "less is left for heirs",
+    TOO_LITTLE_EARLY: "too little early on",
+    TOO_LITTLE_LATE: "too little late on",
+    LEAVES_LESS: "less left for heirs",
 }
 
 ESTIMATES = "These are estimates, not promises."
