@@ -38,6 +38,7 @@ Futures = Annotated[int | None, typer.Option(min=100, help="Futures to test (def
 Seed = Annotated[int | None, typer.Option(min=0, help="Seed of the drawn futures; same seed, same plan.")]
 
 PASSWORD_VARIABLE = "PLANNER_PDF_PASSWORD"
+SNAPSHOT_FUTURES = 5_000
 Result = TypeVar("Result")
 
 
@@ -293,6 +294,58 @@ def compare(
         with _progress(errors, False) as progress:
             found = answer(read, views, _settings(futures, seed), progress, _warner(errors))
         _show(found, as_json)
+
+
+@app.command()
+def snapshot(
+    client: ClientWorkbook,
+    as_json: Annotated[bool, typer.Option("--json", help="Print for other programs.")] = False,
+    futures: Futures = None,
+    seed: Seed = None,
+) -> None:
+    """Show the numbers of a review meeting on one screen."""
+    with reporting_errors():
+        from dataclasses import replace
+
+        from planner.commands.answers import Answer
+        from planner.reports.terminal_snapshot import snapshot_json, snapshot_screen
+        from planner.snapshot import snapshot as take_snapshot
+        from planner.workbook.reading import read_workbook
+
+        errors = Console(stderr=True, highlight=False)
+        read = read_workbook(client)
+        _warner(errors)(read.warnings)
+        settings = replace(_settings(futures or SNAPSHOT_FUTURES, seed), late_years=False)
+        with _progress(errors, False) as progress:
+            shot = take_snapshot(read.household, settings, progress)
+        screen = (lambda width, plain: snapshot_screen(shot, width, plain),)
+        _show(Answer(snapshot_json(shot), screen), as_json)
+
+
+@app.command()
+def review(
+    client: ClientWorkbook,
+    last: Annotated[
+        Path, typer.Option(metavar="RESULTS.json", help="Last year's results, from plan --json.")
+    ],
+    as_json: Annotated[bool, typer.Option("--json", help="Print for other programs.")] = False,
+    seed: Seed = None,
+) -> None:
+    """A year on: where the client stands against last year's plan, and what changes now."""
+    with reporting_errors():
+        from planner.commands.answers import Answer
+        from planner.reports.terminal_review import review_screen
+        from planner.review import read_last, review_json
+        from planner.review import review as make_review
+        from planner.workbook.reading import read_workbook
+
+        errors = Console(stderr=True, highlight=False)
+        before = read_last(last)
+        read = read_workbook(client)
+        _warner(errors)(read.warnings)
+        with _progress(errors, False) as progress:
+            found = make_review(read.household, before, _settings(None, seed), progress)
+        _show(Answer(review_json(found), (lambda width, plain: review_screen(found, width),)), as_json)
 
 
 @app.command()

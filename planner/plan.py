@@ -296,7 +296,7 @@ def make_plan(
         futures=example_futures(problem, paths, solved.scenarios, plan_year),
         survivors=_survivors(household, problem, policy, middle),
         what_ifs=results,
-        yearly_costs=_yearly_costs(household, now.portfolio),
+        yearly_costs=yearly_costs(household, now.portfolio),
         plan_costs=_plan_costs(problem, paths, fees),
         warnings=read.warnings,
         sources=Sources(
@@ -461,7 +461,7 @@ def _fees(household: Household) -> np.ndarray:
     return np.array([portfolio.yearly_cost for portfolio in portfolios]) + household.adviser_fee
 
 
-def _yearly_costs(household: Household, portfolio: int) -> tuple[tuple[str, float], ...]:
+def yearly_costs(household: Household, portfolio: int) -> tuple[tuple[str, float], ...]:
     """Fees this year on today's savings, in money."""
     total = sum(account.balance for account in household.accounts)
     own = float(_fees(household)[portfolio]) - household.adviser_fee
