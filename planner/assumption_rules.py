@@ -142,10 +142,11 @@ def _tax(household: Household) -> Iterator[Diagnostic]:
         hint = near_miss(rules, choices, "sets are")
         yield Diagnostic("tax-rules-unknown", "tax_rules", f"no tax rules are called {rules!r}; {hint}")
     elif rate is None and rules not in ("own", "none"):
-        message = (
-            f"{rules} leaves out state or regional income tax; give its rate on the sheet Tax, "
-            "0 if there is none"
-        )
+        from planner import taxes  # local: `planner new` need not wait for numpy
+
+        regional = taxes.load(rules).regional if rules in shipped_names else ""
+        remedy = regional or "give its rate on the sheet Tax"
+        message = f"{rules} leaves out state or regional income tax; {remedy}, 0 if there is none"
         yield Diagnostic("no-local-tax", "extra_income_tax_rate", message, "warning")
     own = household.own_tax
     if rules == "own" and (own is None or not own.brackets):

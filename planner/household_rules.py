@@ -24,6 +24,7 @@ from planner.household import (
     risk_aversion_from_gambles,
 )
 from planner.rule_terms import RULE_TERMS
+from planner.situation_rules import situation_problems
 
 # ISO 4217 list one, active national currencies (from memory, 2025).
 CURRENCIES = frozenset(
@@ -50,6 +51,7 @@ def household_problems(household: Household) -> Iterator[Diagnostic]:
     yield from _quote_and_rules(household)
     yield from _records(household)
     yield from _means(household)
+    yield from situation_problems(household)
 
 
 def _identity(household: Household) -> Iterator[Diagnostic]:

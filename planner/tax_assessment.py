@@ -86,6 +86,12 @@ class TaxRules:
         Law year of the amounts.
     notes : tuple of str
         Assumptions and what is not covered, for the plan's assumptions page.
+    year_starts : (month, day)
+        When the law year begins: `year` lasts until the day before in the next calendar year.
+    regional : str
+        Whose rates these are not, said where no state or regional rate is given.
+    cautions : mapping of str to str
+        What to say in a situation; the situations are in `planner.situation_rules`.
     taxed : "together" or "each person"
         Whether a couple is assessed jointly.
     age_at : "end of year" or "plan date"
@@ -109,6 +115,9 @@ class TaxRules:
     year: int
     checked: str = ""
     notes: tuple[str, ...] = ()
+    year_starts: tuple[int, int] = (1, 1)
+    regional: str = ""
+    cautions: Mapping[str, str] | None = None
     taxed: Literal["together", "each person"] = "together"
     age_at: AgeAt = "plan date"
     treatment: Mapping[IncomeKind, Treatment] | None = None

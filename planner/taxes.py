@@ -8,8 +8,9 @@ from __future__ import annotations
 
 import difflib
 import tomllib
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from datetime import date
 from functools import cache
 from importlib import resources
 from importlib.abc import Traversable
@@ -41,6 +42,10 @@ __all__ = [
     "own",
     "rate_and_room",
 ]
+
+
+CAUTIONS = ("minimum_above_needs", "paid_in_after_access", "estate_without_rate")
+"""Situations for which a set of rules may have something to say; see `planner.situation_rules`."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -179,6 +184,9 @@ def parse(name: str, text: str) -> TaxRules:
         year=year,
         checked=top.take("checked", ""),
         notes=tuple(top.take("notes", ())),
+        year_starts=_month_and_day(top.take("year_starts", "01-01")),
+        regional=top.take("regional", ""),
+        cautions=top.table("cautions").texts(CAUTIONS),
         taxed=top.take("taxed", "together"),
         age_at=top.take("age_at", "plan date"),
         treatment={kind: _treatment(income.take(kind.value, 1.0)) for kind in IncomeKind},
@@ -227,6 +235,9 @@ class _Table:
         self.parts += parts
         return parts
 
+    def texts(self, keys: Sequence[str]) -> dict[str, str]:
+        return {key: str(self.take(key)) for key in keys if key in self.content}
+
     def by_status(self, convert: Callable[[Any], Any]) -> dict[Status, Any]:
         """Entries ``single`` and ``couple``; empty where the table gives neither."""
         return {status: convert(self.take(status)) for status in STATUSES if status in self.content}
@@ -241,6 +252,11 @@ class _Table:
 def _treatment(value: float | str) -> Treatment:
     words: dict[str, Treatment] = {"ordinary": 1.0, "exempt": 0.0, "benefit": "benefit"}
     return words[value] if isinstance(value, str) else float(value)
+
+
+def _month_and_day(text: str) -> tuple[int, int]:
+    first = date.fromisoformat(f"2001-{text}")
+    return first.month, first.day
 
 
 def _indexing(table: _Table) -> Indexing:

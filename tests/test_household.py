@@ -322,10 +322,13 @@ def test_every_code_tried_here_is_in_the_table():
     assert {case[0] for case in (*ERRORS, *WARNINGS)} <= set(CODES)
 
 
+RULE_MODULES = ("household_rules", "assumption_rules", "situation_rules", "checks", "scenarios")
+
+
 def test_codes_in_the_program_are_those_in_the_table():
     """Both ways, for the modules about the household and its workbook."""
     root = Path(__file__).parents[1] / "planner"
-    sources = [root / f"{name}.py" for name in ("household_rules", "assumption_rules", "checks", "scenarios")]
+    sources = [root / f"{name}.py" for name in RULE_MODULES]
     sources += sorted((root / "workbook").glob("*.py"))
     text = "\n".join(path.read_text("utf-8") for path in sources)
     used = set(re.findall(r'(?:Diagnostic|CellProblem|refuse|say)\(\s*"([a-z-]+)"', text))

@@ -39,7 +39,7 @@ LAYERS = (
     ("planner.scenarios", "planner.stresses"),
     ("planner.workbook",),
     ("planner.household_rules",),
-    ("planner.assumption_rules",),
+    ("planner.assumption_rules", "planner.situation_rules"),
     ("planner.taxes", "planner.mortality", "planner.markets", "planner.preferences"),
     ("planner.tax_files",),
     ("planner.tax_assessment",),

@@ -26,6 +26,7 @@ def shipped_tables(
     blocks: list[RenderableType] = [Text("Life tables", style="bold")]
     for table in life_tables:
         improvement = "with yearly improvement" if table.improvement else "no improvement of death rates"
+        behind = max(rules.year for rules in tax_rules) - table.year
         blocks.append(
             _entry(
                 table.name,
@@ -34,6 +35,7 @@ def shipped_tables(
                 [
                     f"{table.publisher}. {table.source}",
                     f"Ages {table.ages[0]} to {table.ages[1]}; {improvement}.",
+                    f"Deaths of {table.year}: {behind} years behind the newest tax rules below.",
                 ],
                 width,
             )

@@ -40,7 +40,13 @@ def workbook_bytes(book: Workbook, dated: date = _UNDATED) -> bytes:
 class _Archive(zipfile.ZipFile):
     """Parts carry no time."""
 
-    def writestr(self, name: Any, data: Any, *options: Any, **named: Any) -> None:  # noqa: ANN401
+    def writestr(  # type: ignore[override]
+        self,
+        name: Any,  # noqa: ANN401 - as in zipfile
+        data: Any,  # noqa: ANN401
+        *options: Any,  # noqa: ANN401
+        **named: Any,  # noqa: ANN401
+    ) -> None:
         part = name if isinstance(name, zipfile.ZipInfo) else zipfile.ZipInfo(name)
         part.compress_type = zipfile.ZIP_DEFLATED
         part.external_attr = 0o600 << 16
@@ -56,6 +62,8 @@ class _Writer(ExcelWriter):
         content = io.BytesIO()
         writer = WorksheetWriter(sheet, content)
         writer.write()
-        sheet._rels = writer._rels
-        self._archive.writestr(sheet.path[1:], content.getvalue())
+        sheet._rels = writer._rels  # type: ignore[attr-defined]
+        self._archive.writestr(  # type: ignore[attr-defined]
+            sheet.path[1:], content.getvalue()
+        )
         self.manifest.append(sheet)
