@@ -76,56 +76,56 @@ def expected_value(
 ) -> tuple[FloatArray, FloatArray]:
     """E[g(C(y R_p))] and its slope along tax-deferred, E[g'(C) C_2 R_p], for each portfolio.
 
-    (n1, n2, n3) levels and slopes -> two arrays (n_portfolios, n1, n2, n3).
+    (n1, n2, n3) levels and slopes -> two arrays (n_portfolios, n1, n2, n3). One portfolio at a time:
+    its arrays then stay in the processor's cache.
+    """
+    n_portfolios, n_nodes = problem.gross.shape
+    value, slope = (np.zeros((n_portfolios, level.size)) for _ in range(2))
+    for p in range(n_portfolios):
+        part = slice(p * n_nodes, (p + 1) * n_nodes)
+        maps = tuple(m[part] for m in growth.maps)
+        rows = tuple(r[part] for r in growth.cells)
+        moved = _moved(maps, rows, level)
+        value[p] = problem.node_weights @ smooth.value(moved)
+        if level.shape[1] > 1:
+            slope2_moved = _moved(maps, None, slope2)
+            slope2_moved *= smooth.marginal(moved)
+            slope[p] = (problem.node_weights * problem.gross[p]) @ slope2_moved
+    shape = (n_portfolios, *level.shape)
+    return value.reshape(shape), slope.reshape(shape)
+
+
+def _moved(maps: tuple[FloatArray, ...], cells: tuple[IntArray, ...] | None, level: FloatArray) -> FloatArray:
+    """Interpolate at the grown nodes: (n1, n2, n3) -> (n_maps, n1 n2 n3); between cell ends if given.
+
+    Each axis is the leading one in turn: (n1, n2 n3), (maps, n2, n3 n1), (maps, n3, n1 n2).
     """
     n1, n2, n3 = level.shape
-    moved = _moved(growth, level)
-    shape = (problem.n_portfolios, -1, n1 * n2 * n3)
-    value = (problem.node_weights @ smooth.value(moved).reshape(shape)).reshape(-1, n1, n2, n3)
-    if n2 == 1:
-        return value, np.zeros_like(value)
-    slope = (smooth.marginal(moved) * _moved(growth, slope2)).reshape(shape)
-    weighted = (problem.node_weights * problem.gross)[:, None, :]
-    return value, (weighted @ slope).reshape(-1, n1, n2, n3)
+    n_maps = maps[0].shape[0]
+    first = level.reshape(1, n1, n2 * n3)
+    moved = maps[0] @ first
+    if cells is not None:
+        _keep_between(moved, np.broadcast_to(first, (n_maps, n1, n2 * n3)), cells[0])
+    for axis, n, rest in ((1, n2, n3 * n1), (2, n3, n1 * n2)):
+        before = moved.reshape(n_maps, -1, n * rest // (n1 if axis == 1 else n2))
+        # Turn the leading axis to the end: (maps, a, b c) -> (maps, b, c a).
+        before = np.ascontiguousarray(before.transpose(0, 2, 1)).reshape(n_maps, n, rest)
+        if n == 1:
+            moved = before
+            continue
+        moved = maps[axis] @ before
+        if cells is not None:
+            _keep_between(moved, before, cells[axis])
+    last = moved.reshape(n_maps, n3, n1 * n2)
+    return np.ascontiguousarray(last.transpose(0, 2, 1)).reshape(n_maps, n1 * n2 * n3)
 
 
-def _moved(growth: GrowthMaps, level: FloatArray) -> FloatArray:
-    """Interpolate at the grown nodes: (n1, n2, n3) -> (n_maps, n1, n2, n3)."""
-    n1, n2, n3 = level.shape
-    map1, map2, map3 = growth.maps
-    cell1, cell2, cell3 = growth.cells
-    n_maps = map1.shape[0]
-    flat = level.reshape(n1, n2 * n3)
-    moved = _between(map1.reshape(n_maps * n1, n1) @ flat, flat, cell1.ravel())
-    moved = moved.reshape(n_maps, n1, n2, n3)
-    if n2 > 1:
-        # Axes move to the front in turn: (maps, n2, n1 n3), then (maps, n3, n2 n1).
-        before = np.ascontiguousarray(moved.transpose(0, 2, 1, 3)).reshape(n_maps, n2, n1 * n3)
-        moved = _between(
-            (map2 @ before).reshape(n_maps * n2, n1 * n3), before.reshape(n_maps * n2, n1 * n3), _rows(cell2)
-        )
-        moved = moved.reshape(n_maps, n2, n1, n3).transpose(0, 2, 1, 3)
-    if n3 > 1:
-        before = np.ascontiguousarray(moved.transpose(0, 3, 1, 2)).reshape(n_maps, n3, n1 * n2)
-        moved = _between(
-            (map3 @ before).reshape(n_maps * n3, n1 * n2), before.reshape(n_maps * n3, n1 * n2), _rows(cell3)
-        )
-        moved = moved.reshape(n_maps, n3, n1, n2).transpose(0, 2, 3, 1)
-    return np.ascontiguousarray(moved)
-
-
-def _rows(cells: IntArray) -> IntArray:
-    """Row numbers of cells (n_maps, n) in arrays whose rows run over maps, then nodes; -1 stays -1."""
-    start = cells.shape[1] * np.arange(cells.shape[0])[:, None]
-    return np.where(cells < 0, -1, cells + start).ravel()
-
-
-def _between(values: FloatArray, ends: FloatArray, cell: IntArray) -> FloatArray:
-    """Keep each row of values between rows cell and cell + 1 of ends, where cell >= 0."""
-    if ends.shape[0] == 1:
-        return values
-    at = np.maximum(cell, 0)
-    left, right = ends[at], ends[at + 1]
-    kept = np.clip(values, np.minimum(left, right), np.maximum(left, right))
-    kept[cell < 0] = values[cell < 0]
-    return kept
+def _keep_between(values: FloatArray, ends: FloatArray, cells: IntArray) -> None:
+    """Keep rows of values (maps, n, m) between rows cell and cell + 1 of ends, in place; -1 is free."""
+    for kept, row, cell in zip(values, ends, cells, strict=True):
+        free = np.flatnonzero(cell < 0)
+        beyond = kept[free]
+        at = np.maximum(cell, 0)
+        np.maximum(kept, row[at], out=kept)
+        np.minimum(kept, row[np.minimum(at + 1, row.shape[0] - 1)], out=kept)
+        kept[free] = beyond

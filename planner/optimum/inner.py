@@ -16,7 +16,7 @@ from planner.piecewise import FloatArray
 from planner.preferences import SpendingUtility
 from planner.problem import IntArray
 
-NEWTON_STEPS = 2  # the cell's secant is close: 2 steps leave about 1e-6 of spending
+NEWTON_STEPS = 1  # the cell's secant is close: 1 step leaves about 1e-6 of spending
 TINY_SLOPE = 1e-12
 
 
@@ -94,6 +94,8 @@ class CashTable:
         Slope of the level along tax-deferred (envelope theorem).
     spending : ndarray of the same shape
         c, money a year.
+    pooled : bool
+        Money is cash + tax-free.
     """
 
     grid: CashGrid
@@ -101,6 +103,7 @@ class CashTable:
     slope: FloatArray
     slope2: FloatArray
     spending: FloatArray
+    pooled: bool
 
 
 def hermite(
@@ -233,7 +236,7 @@ def cash_table(
     table = smooth.inverse((felicity.value(spending) + later) / weight)
     unit = weight * smooth.marginal(table)
     slope = np.minimum(marginal / unit, _steepest(table, m))
-    return CashTable(grid, table, slope, deferred / unit, spending)
+    return CashTable(grid, table, slope, deferred / unit, spending, pooled)
 
 
 def _along(values: FloatArray, j: IntArray, k: IntArray, other: IntArray, share: FloatArray) -> FloatArray:

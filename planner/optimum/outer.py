@@ -19,7 +19,7 @@ from planner.optimum.surface import Surface, hermite_basis, hermite_rows
 from planner.piecewise import FloatArray, PiecewiseLinear
 from planner.problem import IntArray, Problem
 
-ROOT_STEPS = 4  # false-position steps on the first-order condition between two candidates
+ROOT_STEPS = 3  # false-position steps on the first-order condition between two candidates
 
 
 @dataclass(frozen=True, slots=True, eq=False)

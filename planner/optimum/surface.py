@@ -14,6 +14,9 @@ Side = tuple[tuple[FloatArray, FloatArray], tuple[FloatArray, FloatArray]]
 Basis = tuple[Side, Side]
 
 
+BLOCK = 2048  # points at a time, so that their numbers stay in the processor's cache
+
+
 class Surface:
     """Hermite interpolation of a cash table in money, tax-deferred and (for conversions) tax-free.
 
@@ -27,6 +30,7 @@ class Surface:
         self.deferred = deferred
         self.free = free
         self.slopes3 = slopes3
+        self.sloped = table.pooled
         n2, n_cash, n3 = table.level.shape
         self.shape = (n2, n_cash, n3)
 
@@ -40,46 +44,84 @@ class Surface:
         level2 = limited_slopes(table.slope2, level, deferred.nodes)
         level3 = limited_slopes(along3(level).transpose(2, 0, 1), level.transpose(2, 0, 1), free.nodes)
         level3 = level3.transpose(1, 2, 0)
-        parts = [level, slope, level2, along2(slope)]
-        self.packed = np.stack(parts, axis=-1).reshape(-1, 4)
-        parts3 = [level3, along3(slope), along3(level2), along3(parts[3])]
-        self.packed3 = np.stack(parts3, axis=-1).reshape(-1, 4)
+        plain = [level, slope, level2, along2(slope)]
+        sloped = [level3, along3(slope), along3(level2), along3(plain[3])]
+        # Eight numbers a node, next to one another: one cache line a corner.
+        self.packed = np.stack(plain + sloped, axis=-1).reshape(-1, 8)
 
     def __call__(
         self, cash: FloatArray, deferred: FloatArray, node3: IntArray, free: FloatArray | None
     ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         """Level and its slopes along cash, tax-deferred and tax-free at scattered points (n,).
 
-        `free` None: at tax-free node `node3` (the slope along tax-free is then 0, unused).
+        `free` None: at tax-free node `node3`. The slope along tax-free is 0 there, and where the money
+        of the table is cash alone: it is not used.
         """
+        result = np.empty((4, cash.size))
+        for start in range(0, cash.size, BLOCK):
+            part = slice(start, start + BLOCK)
+            self._block(
+                cash[part], deferred[part], node3[part], None if free is None else free[part], result[:, part]
+            )
+        return result[0], result[1], result[2], result[3]
+
+    def _block(
+        self,
+        cash: FloatArray,
+        deferred: FloatArray,
+        node3: IntArray,
+        free: FloatArray | None,
+        result: FloatArray,
+    ) -> None:
         grid = self.table.grid
         n2, n_cash, n3 = self.shape
         m = grid.cell(cash)
         basis_m = hermite_basis(cash, grid.nodes[m], grid.nodes[m + 1])
+        j = self.deferred.cell(deferred)
+        basis_2: tuple[Side | None, ...] = (None,)
         if n2 > 1:
-            j = self.deferred.cell(deferred)
             basis_2 = hermite_basis(deferred, self.deferred.nodes[j], self.deferred.nodes[j + 1])
-            rows: tuple[int, ...] = (0, 1)
-        else:
-            j = np.zeros(cash.size, dtype=np.int64)
-            one, zero = np.ones(cash.size), np.zeros(cash.size)
-            basis_2 = ((one, zero), (zero, zero)), ((zero, zero), (zero, zero))
-            rows = (0,)
-        if free is None or n3 == 1:
-            sums = self._sum(self.packed, (j * n_cash + m) * n3 + node3, rows, basis_m, basis_2)
-            return *sums, np.zeros(cash.size)
-        i3 = self.free.cell(free)
-        basis_3 = hermite_basis(free, self.free.nodes[i3], self.free.nodes[i3 + 1])
-        base = (j * n_cash + m) * n3 + i3
-        total = [np.zeros(cash.size) for _ in range(4)]
-        for side in (0, 1):
-            plain = self._sum(self.packed, base + side, rows, basis_m, basis_2)
-            sloped = self._sum(self.packed3, base + side, rows, basis_m, basis_2)
-            (h, g), (dh, dg) = basis_3[side]
-            for q in range(3):
-                total[q] += h * plain[q] + g * sloped[q]
-            total[3] += dh * plain[0] + dg * sloped[0]
-        return total[0], total[1], total[2], total[3]
+        basis_3 = None
+        if free is not None and n3 > 1:
+            node3 = self.free.cell(free)
+            basis_3 = hermite_basis(free, self.free.nodes[node3], self.free.nodes[node3 + 1])
+        base = (j * n_cash + m) * n3 + node3
+        result[:] = 0.0
+        for row, side_2 in enumerate(basis_2):
+            for side, ((hm, gm), (dhm, dgm)) in enumerate(basis_m):
+                at = base + (row * n_cash + side) * n3
+                corner, along = self._tax_free(at, basis_3)
+                v, vm, v2, vm2 = corner
+                flat, turned = hm * v + gm * vm, dhm * v + dgm * vm
+                if side_2 is None:
+                    result[0] += flat
+                    result[1] += turned
+                else:
+                    (h2, g2), (dh2, dg2) = side_2
+                    cross = hm * v2 + gm * vm2
+                    result[0] += h2 * flat + g2 * cross
+                    result[1] += h2 * turned + g2 * (dhm * v2 + dgm * vm2)
+                    result[2] += dh2 * flat + dg2 * cross
+                if along:
+                    deep = hm * along[0] + gm * along[1]
+                    if side_2 is None:
+                        result[3] += deep
+                    else:
+                        result[3] += h2 * deep + g2 * (hm * along[2] + gm * along[3])
+
+    def _tax_free(self, at: IntArray, basis: Basis | None) -> tuple[list[FloatArray], list[FloatArray]]:
+        """Node numbers interpolated along tax-free, four of (n,), and their slopes; none on a node."""
+        left = self.packed[at].T
+        if basis is None:
+            return list(left[:4]), []
+        right = self.packed[at + 1].T
+        ((h0, g0), (dh0, dg0)), ((h1, g1), (dh1, dg1)) = basis
+        value = [h0 * left[q] + g0 * left[q + 4] + h1 * right[q] + g1 * right[q + 4] for q in range(4)]
+        if not self.sloped:
+            return value, []
+        return value, [
+            dh0 * left[q] + dg0 * left[q + 4] + dh1 * right[q] + dg1 * right[q + 4] for q in range(4)
+        ]
 
     def spending(self, cash: FloatArray, deferred: FloatArray, free: FloatArray) -> FloatArray:
         """Spending at scattered points (n,), linear between the nodes.
@@ -100,24 +142,6 @@ class Surface:
                 left, right = table[base], table[base + n3]
                 total += weight2 * weight3 * (left + share * (right - left))
         return total
-
-    def _sum(
-        self, packed: FloatArray, base: IntArray, rows: tuple[int, ...], basis_m: Basis, basis_2: Basis
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
-        _, n_cash, n3 = self.shape
-        value, along_m, along_2 = (np.zeros(base.size) for _ in range(3))
-        for row in rows:
-            (h2, g2), (dh2, dg2) = basis_2[row]
-            for side in (0, 1):
-                corner = packed[base + (row * n_cash + side) * n3]
-                (hm, gm), (dhm, dgm) = basis_m[side]
-                v, vm, v2, vm2 = corner[:, 0], corner[:, 1], corner[:, 2], corner[:, 3]
-                flat = hm * v + gm * vm
-                cross = hm * v2 + gm * vm2
-                value = value + h2 * flat + g2 * cross
-                along_2 = along_2 + dh2 * flat + dg2 * cross
-                along_m = along_m + h2 * (dhm * v + dgm * vm) + g2 * (dhm * v2 + dgm * vm2)
-        return value, along_m, along_2
 
 
 def _linear(grid: LogGrid, x: FloatArray, cell: IntArray) -> list[tuple[IntArray, FloatArray]]:
