@@ -70,6 +70,7 @@ HOUSEHOLD_CODES: Final[dict[str, str]] = {
     "tax-rules-unknown": "no such set of tax rules",
     "tax-own-missing": "own tax rules chosen but the sheet Tax has no brackets",
     "life-table-unknown": "no such life table",
+    "life-table-number": "a table by number that cannot be had or is not one of mortality by age",
     "life-table-own-missing": "own life table chosen but the sheet Life table is blank",
     "people-count": "not one or two people",
     "accounts-missing": "no account",

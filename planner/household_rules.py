@@ -13,7 +13,7 @@ from collections.abc import Iterator
 from planner import shipped
 from planner.assumption_rules import assumption_problems
 from planner.checks import OLDEST, amount, between, names_differ, near_miss
-from planner.diagnostics import Diagnostic
+from planner.diagnostics import Diagnostic, InputError
 from planner.household import (
     JOINT,
     LARGER_OF_THE_TWO,
@@ -25,6 +25,7 @@ from planner.household import (
 )
 from planner.rule_terms import RULE_TERMS
 from planner.situation_rules import situation_problems
+from planner.soa_tables import is_number, numbered_table
 
 # ISO 4217 list one, active national currencies (from memory, 2025).
 CURRENCIES = frozenset(
@@ -81,11 +82,14 @@ def _last_age(person: Person, household: Household) -> float | None:
     if person.life_table == "own":
         table = household.own_life_table
         return float(table.ages[-1]) if table is not None and table.ages else None
-    if person.life_table not in shipped.life_table_names():
+    if person.life_table not in shipped.life_table_names() and not is_number(person.life_table):
         return None
     from planner import mortality  # local: brings in numpy, and only this rule needs it
 
-    return float(mortality.load_table(person.life_table).omega)
+    try:
+        return float(mortality.load_table(person.life_table).omega)
+    except InputError:  # said by `_people`
+        return None
 
 
 def _people(household: Household) -> Iterator[Diagnostic]:
@@ -113,11 +117,17 @@ def _people(household: Household) -> Iterator[Diagnostic]:
         if person.life_table == "own" and household.own_life_table is None:
             message = "the life table is 'own' but the sheet Life table is blank"
             yield Diagnostic("life-table-own-missing", f"{path}.life_table", message)
+        elif is_number(person.life_table):
+            try:
+                numbered_table(person.life_table)
+            except InputError as error:
+                message = error.diagnostics[0].message
+                yield Diagnostic("life-table-number", f"{path}.life_table", message)
         elif person.life_table != "own" and tables and person.life_table not in tables:
             hint = near_miss(person.life_table, (*tables, "own"), "tables are")
             message = f"no life table is called {person.life_table!r}; {hint}"
             yield Diagnostic("life-table-unknown", f"{path}.life_table", message)
-        if person.life_table != "own" and person.mortality_multiplier == 1.0:
+        if person.life_table in tables and person.mortality_multiplier == 1.0:
             message = (
                 f"{person.life_table} describes a whole population; clients of advisers tend to live longer: "
                 f"consider death rates below 1 for {person.name or 'this person'}"

@@ -19,6 +19,7 @@ from numpy.typing import ArrayLike
 from planner.diagnostics import Diagnostic, InputError
 from planner.household import OwnLifeTable, Sex
 from planner.piecewise import FloatArray
+from planner.soa_tables import is_number, numbered_table
 
 STATUSES_OF_COUPLE = ("both", "first", "second")
 STATUSES_OF_SINGLE = ("first",)
@@ -88,13 +89,17 @@ def available_tables() -> tuple[str, ...]:
 
 @cache
 def load_table(name: str) -> LifeTable:
-    """Return a shipped life table.
+    """Return a shipped life table, or one by its number (see `planner.soa_tables`).
+
+    A table by number is of one sex; whoever it is given to dies by it.
 
     Raises
     ------
     InputError
-        Code ``life-table-unknown``: no shipped table has this name.
+        Code ``life-table-unknown``: no shipped table has this name; ``life-table-number``.
     """
+    if is_number(name):
+        return _from_number(name)
     known = available_tables()
     if name not in known:
         near = difflib.get_close_matches(name, known, n=1)
@@ -125,6 +130,14 @@ def load_table(name: str) -> LifeTable:
         female_improvement=column("female_improvement"),
         male_improvement=column("male_improvement"),
     )
+
+
+def _from_number(name: str) -> LifeTable:
+    found = numbered_table(name)
+    q = _closed(np.array(found.values))
+    factors = np.array(found.factors) if found.factors else None
+    about = (name, found.title, found.publisher, found.source, found.year, found.first_age)
+    return LifeTable(*about, q, q, factors, factors)
 
 
 def own_table(own: OwnLifeTable, year: int = 0) -> LifeTable:

@@ -46,6 +46,7 @@ LAYERS = (
     ("planner.tax_provisions",),
     ("planner.household",),
     ("planner.checks", "planner.codes", "planner.shipped", "planner.files", "planner.rule_terms"),
+    ("planner.soa_tables",),
     ("planner.piecewise", "planner.diagnostics", "planner.data"),
     ("planner",),
 )
