@@ -269,7 +269,8 @@ def _tables(read: ReadWorkbook, views: Views, quick: PlanSettings, progress: Pro
     if views.decisions:
         from planner.decisions import decisions
 
-        curves, left_out = decisions(household, quick, progress)
+        # Some candidates differ by little: finer grids than for a single what-if.
+        curves, left_out = decisions(household, replace(quick, solver=quick.what_if_solver), progress)
         data["decisions"] = [export_views.decision_json(curve) for curve in curves]
         data["decisions_left_out"] = list(left_out)
         blocks.append(
