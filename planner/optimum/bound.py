@@ -261,7 +261,8 @@ class _Proof:
         common = limits / np.maximum(pace, 1e-300)
         leading = np.where(little[:, TAXABLE], common[:, TAX_FREE], common[:, TAXABLE])
         leading = np.where(little[:, TAXABLE] & little[:, TAX_FREE], common[:, TAX_DEFERRED], leading)
-        within = (limits / np.maximum(estate_most, 1e-300))[:, [TAXABLE, TAX_FREE]].min(axis=1)
+        # A tenth of each limit is left to the living, so that no price falls to nothing.
+        within = 0.9 * (limits / np.maximum(estate_most, 1e-300))[:, [TAXABLE, TAX_FREE]].min(axis=1)
         estate = np.minimum(np.clip(leading, 0.5, LARGEST_FACTOR), within)
 
         # An empty account costs nothing to price: tax-deferred is priced high, so that nobody gains by
@@ -283,7 +284,7 @@ class _Proof:
         first, _ = priced(start)
         terms, most = choice.terms(first)
         chosen = start
-        least = np.maximum(0.5 * start, estate * estate_most[:, TAXABLE])
+        least = np.maximum(0.5 * start, 1.05 * estate * estate_most[:, TAXABLE])
         for candidate in choice.cash_prices(raw[:, TAXABLE], first):
             cash = np.clip(candidate, least, np.minimum(limit[:, TAXABLE], m3))
             other, other_most = choice.terms(priced(cash)[0])

@@ -39,19 +39,20 @@ class SolverSettings:
         Below wealth / `scale` nodes are about evenly spaced, above it in proportion.
     """
 
-    taxable: int = 16
-    tax_deferred: int = 22
-    tax_free: int = 10
-    cash: int = 60
+    taxable: int = 18
+    tax_deferred: int = 24
+    tax_free: int = 11
+    cash: int = 56
     top: float = 4.0
-    scale: float = 25.0
+    scale: float = 50.0
 
     @classmethod
     def for_problem(cls, problem: Problem) -> SolverSettings:
         """Return default grids: an absent account's nodes go to the others."""
         _, deferred, free = problem.has_account
         if deferred and free:
-            return cls()
+            # One status costs a third of three: a single person can have the finer grid.
+            return cls() if problem.n_statuses > 1 else cls(22, 30, 14, scale=60.0)
         if deferred:
             return cls(taxable=28, tax_deferred=40, cash=90)
         if free:
