@@ -82,7 +82,7 @@ def load(name: str) -> TaxRules:
         near = difflib.get_close_matches(name, known, n=1)
         hint = f"did you mean {near[0]!r}?" if near else f"shipped sets are {', '.join(known)}, or 'own'"
         raise InputError([Diagnostic("tax-rules-unknown", "tax_rules", f"no tax rules {name!r}; {hint}")])
-    return parse(name, (_folder() / f"{name}.toml").read_text(encoding="utf-8"))
+    return parse(name, _text(name))
 
 
 def none() -> TaxRules:
@@ -168,7 +168,10 @@ def parse(name: str, text: str) -> TaxRules:
     ValueError
         The text is not TOML, a needed key is missing or a key is not known.
     """
-    top = _Table(name, tomllib.loads(text))
+    content = tomllib.loads(text)
+    if "extends" in content:  # another set with some of its keys replaced
+        content = tomllib.loads(_text(content.pop("extends"))) | content
+    top = _Table(name, content)
     income = top.table("income")
     withdrawals = top.table("withdrawals")
     planning = top.table("planning")
@@ -346,6 +349,10 @@ def _worked_case(table: _Table, year: int) -> WorkedCase:
 
 def _problem(code: str, message: str) -> Diagnostic:
     return Diagnostic(code, "own_tax", message)
+
+
+def _text(name: str) -> str:
+    return (_folder() / f"{name}.toml").read_text(encoding="utf-8")
 
 
 def _folder() -> Traversable:

@@ -15,6 +15,7 @@ from couples import COUPLE_LEGACY, COUPLE_TAXED_EACH, COUPLE_THREE_ACCOUNTS
 from openpyxl.workbook import Workbook
 from singles import EARLY_RETIREE, LATE_RETIRED, SINGLE_WITH_PENSION
 
+from planner.workbook.saving import workbook_bytes
 from planner.workbook.writing import Values, make_workbook
 
 CLIENTS: dict[str, Values] = {
@@ -39,7 +40,7 @@ def workbooks() -> dict[str, Workbook]:
 def main(folder: Path) -> None:
     """Write every sample workbook into a folder, replacing those that are there."""
     for name, workbook in workbooks().items():
-        workbook.save(folder / f"{name}.xlsx")
+        (folder / f"{name}.xlsx").write_bytes(workbook_bytes(workbook))
 
 
 if __name__ == "__main__":
