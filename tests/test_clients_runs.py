@@ -17,6 +17,7 @@ import client_generator
 import openpyxl
 import psutil
 import pytest
+from test_privacy import WATCHED
 
 from planner.clients import running
 from planner.clients.listing import plan_clients
@@ -173,6 +174,30 @@ def test_ctrl_c_ends_the_run_and_its_workers(folder, tmp_path):
     assert "Traceback" not in errors
     assert not psutil.wait_procs(workers, timeout=WAIT)[1]
     assert not list((tmp_path / "out").glob("*.part"))
+
+
+WATCHED_RUN = """
+from concurrent.futures import ThreadPoolExecutor
+from planner.clients.running import Engine
+engine = Engine(lambda: ThreadPoolExecutor(1), lambda: 1)
+plan_clients(Path(sys.argv[2]), Path(sys.argv[3]), Work(TINY), engine)
+"""
+
+
+def test_nothing_is_written_elsewhere_and_nobody_is_called(folder, tmp_path):
+    """What a worker does and what the run does, here in one process under the hook of the other commands."""
+    small, log = tmp_path / "small", tmp_path / "log"
+    small.mkdir()
+    (small / "a.xlsx").write_bytes((folder / "client_0000.xlsx").read_bytes())
+    hook, imports = WATCHED.split("sys.argv = ")[0], RUN.split("if __name__")[0]
+    code = imports + hook + WATCHED_RUN.replace("TINY", repr(TINY))
+    command = [sys.executable, "-c", code, str(log), str(small), str(tmp_path / "out")]
+    done = subprocess.run(command, cwd=tmp_path, capture_output=True, text=True, timeout=4 * WAIT)
+    assert done.returncode == 0, done.stderr
+    written = {Path(tmp_path, line) for line in log.read_text().splitlines() if line != "/dev/null"}
+    kept = {path for path in written if "__pycache__" not in path.parts}
+    assert len(kept) == 6  # the lock, the record, the plan's two files and the list's two
+    assert not {path for path in kept if tmp_path / "out" not in (path, *path.parents)}
 
 
 @pytest.mark.parametrize(

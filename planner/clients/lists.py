@@ -96,7 +96,8 @@ def _problem(problem: Diagnostic) -> dict[str, str]:
 def list_workbook(rows: Sequence[ClientRow], work: Work) -> bytes:
     """Return the list as an .xlsx file: one row a household, and every problem and warning.
 
-    Text that a spreadsheet could take for a formula is stored as text.
+    Text that a spreadsheet could take for a formula is stored as text; the same rows give the same
+    bytes.
     """
     book = Workbook()
     book.remove(book.active)  # type: ignore[arg-type]
