@@ -318,6 +318,9 @@ def _conversions(search: _Search) -> Iterator[DecisionCurve | str]:
     if savings <= 0:
         yield "how much to convert each year: there is no tax-deferred account"
         return
+    # What conversions gain is small beside the errors of coarse grids: here the plan's own.
+    settings = replace(search.settings, solver=None)
+    search = _Search(solve_household(household, settings), settings)
     wishes = replace(household.preferences, conversions_allowed=True)
     allowed = (
         search.given

@@ -26,7 +26,7 @@ Result = TypeVar("Result")
 QUICK_PATHS = 1_500
 """Futures for what-ifs, stresses and searches, where no other number is asked for."""
 
-QUICK_SOLVER = SolverSettings(9, 9, 6, 36)
+QUICK_SOLVER = SolverSettings(10, 10, 7, 40)
 """Their grids: a change is compared with the original on the same grid, so errors nearly drop out."""
 
 
