@@ -111,7 +111,10 @@ def _place_of(error: Exception) -> str:
 
 
 @app.command()
-def new(client: ClientWorkbook) -> None:
+def new(
+    client: ClientWorkbook,
+    as_json: Annotated[bool, typer.Option("--json", help="Print for other programs.")] = False,
+) -> None:
     """Write a blank client workbook, with a guide sheet and drop-down lists."""
     with reporting_errors():
         from planner.workbook.writing import write_blank
@@ -120,7 +123,12 @@ def new(client: ClientWorkbook) -> None:
             message = f"expected a name ending in .xlsx, such as {client.stem or 'client'}.xlsx"
             raise InputError([Diagnostic("file-not-xlsx", str(client), message)])
         write_blank(client)
-        typer.echo(f"{client} written; its first sheet says how to fill it in")
+        if as_json:
+            import json
+
+            typer.echo(json.dumps({"written": str(client)}, ensure_ascii=False))
+        else:
+            typer.echo(f"{client} written; its first sheet says how to fill it in")
 
 
 @app.command()

@@ -11,10 +11,17 @@ from pathlib import Path
 import openpyxl
 import pytest
 from client_workbooks import minimal, saved
+from golden_text import rendered
 from test_history import invented
 from typer.testing import CliRunner
 
 from planner.cli import app
+from planner.commands.comparing import Views, answer
+from planner.optimum.recursion import SolverSettings
+from planner.plan import PlanSettings
+from planner.reports.terminal_snapshot import snapshot_screen
+from planner.snapshot import snapshot
+from planner.workbook.reading import read_workbook
 
 SAMPLES = Path(__file__).parents[1] / "sample_clients"
 SINGLE = str(SAMPLES / "single_with_pension.xlsx")
@@ -182,6 +189,28 @@ def test_tables_as_json():
     data = json.loads(run("tables", "--json").stdout)
     assert {"us-ssa-2022"} <= {table["name"] for table in data["life_tables"]}
     assert {"us-federal-2026"} <= {rules["name"] for rules in data["tax_rules"]}
+
+
+def test_a_blank_workbook_as_json(tmp_path):
+    path = tmp_path / "blank.xlsx"
+    assert json.loads(run("new", str(path), "--json").stdout) == {"written": str(path)}
+    assert path.exists()
+
+
+@pytest.mark.parametrize("name", sorted(p.stem for p in SAMPLES.glob("*.xlsx") if p.stem != "broken"))
+def test_every_sample_on_tiny_grids(name):
+    """Whatever a client has, every screen can be drawn; accuracy is not the matter here."""
+    read = read_workbook(SAMPLES / f"{name}.xlsx")
+    tiny = SolverSettings(5, 5, 4, 20)
+    settings = PlanSettings(n_paths=100, solver=tiny, what_if_solver=tiny, late_years=False)
+    screens = [snapshot_screen(snapshot(read.household, settings), 80)]
+    views = Views(rules=("constant-real", "secure-first"))
+    screens += [block(80, False) for block in answer(read, views, settings, lambda s, w: None, list).blocks]
+    for screen in screens:
+        text = rendered(screen)
+        assert max(len(line) for line in text.splitlines()) <= 80
+        assert "…" not in text
+        assert "nan" not in text
 
 
 def test_an_interrupt_exits_130_and_leaves_nothing(tmp_path):
