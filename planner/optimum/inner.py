@@ -81,9 +81,9 @@ class Felicity:
 class CashTable:
     """G in certainty-equivalent units on nodes of (tax-deferred, money, tax-free).
 
-    Money is cash M; where conversions are allowed it is M + tax-free, at given tax-free: there the
-    value hardly depends on tax-free (not at all once spending draws on it), so that coarse nodes
-    along tax-free do.
+    Money is cash + tax-free, M + x3. At given money the value hardly depends on tax-free (not at all
+    once spending draws on it), so that coarse nodes along tax-free do; and where everything is spent
+    its kink at essential spending lies at the same money, a node, for all of them.
 
     Attributes
     ----------
@@ -94,8 +94,6 @@ class CashTable:
         Slope of the level along tax-deferred (envelope theorem).
     spending : ndarray of the same shape
         c, money a year.
-    pooled : bool
-        Money is cash + tax-free.
     """
 
     grid: CashGrid
@@ -103,7 +101,6 @@ class CashTable:
     slope: FloatArray
     slope2: FloatArray
     spending: FloatArray
-    pooled: bool
 
 
 def hermite(
@@ -132,7 +129,6 @@ def cash_table(
     taxable: FloatArray,
     tax_free: FloatArray,
     weight: float,
-    pooled: bool = False,
 ) -> CashTable:
     """Solve the inner choice on every node of (tax-deferred, cash, tax-free).
 
@@ -142,8 +138,6 @@ def cash_table(
         Account nodes.
     weight : float
         A_V(t, h), the weight of this year's value.
-    pooled : bool
-        The grid is of cash + tax-free instead of cash.
     """
     smooth = felicity.smooth
     level, w = following.level, following.weight
@@ -156,7 +150,7 @@ def cash_table(
         price1 = np.zeros_like(level)
     spend1 = felicity.spend(price1)
     knots1 = np.maximum.accumulate(spend1 + taxable[:, None], axis=1)
-    cash_nodes = m[:, None] - (tax_free if pooled else 0.0 * tax_free)
+    cash_nodes = m[:, None] - tax_free
     index = _bracket(cash_nodes, knots1)
     if n3 > 1:
         price3 = (
@@ -236,7 +230,7 @@ def cash_table(
     table = smooth.inverse((felicity.value(spending) + later) / weight)
     unit = weight * smooth.marginal(table)
     slope = np.minimum(marginal / unit, _steepest(table, m))
-    return CashTable(grid, table, slope, deferred / unit, spending, pooled)
+    return CashTable(grid, table, slope, deferred / unit, spending)
 
 
 def _along(values: FloatArray, j: IntArray, k: IntArray, other: IntArray, share: FloatArray) -> FloatArray:

@@ -112,10 +112,9 @@ class Outer:
         x2, x3 = self.x2[point], self.x3[point]
         tax = s.tax(g)
         left = np.maximum(x2 - g, 0.0)
-        if not s.conversions:
-            cash = self.x1[point] + s.income + g - tax
-            return cash, left, self.node3[point], None if self.on_nodes else x3, 1.0 - slope_of_tax, 0.0
         pool = self.x1[point] + x3 + s.income + g - tax
+        if not s.conversions:
+            return pool, left, self.node3[point], None if self.on_nodes else x3, 1.0 - slope_of_tax, 0.0
         free = x3 + g - s.minimum_share * x2
         return pool, left, self.node3[point], free, 1.0 - slope_of_tax, 1.0
 
@@ -336,26 +335,23 @@ def _node_levels(
     g = nodes2[a] - nodes2[j]
     table, grid = surface.table, surface.table.grid
     n_cash = grid.nodes.size
+    money = taxable[:, None, None] + (s.income + g - s.tax(g))[None, :, None] + nodes3
     if s.conversions:
         free = nodes3[None, :] + (g - s.minimum_share * nodes2[a])[:, None]
         rows = hermite_rows(surface.free, surface.slopes3, free)  # (pairs, n3, n3)
         level = (table.level[j] @ rows.transpose(0, 2, 1)).reshape(-1, n3)
         slope = (table.slope[j] @ rows.transpose(0, 2, 1)).reshape(-1, n3)
-        money = taxable[:, None, None] + (s.income + g - s.tax(g))[None, :, None] + nodes3
         first = np.arange(a.size)[None, :, None] * n_cash
     else:
         level, slope = table.level.reshape(-1, n3), table.slope.reshape(-1, n3)
-        money = (taxable[:, None] + (s.income + g - s.tax(g))[None, :])[:, :, None]
         first = j[None, :, None] * n_cash
     cell = grid.cell(money)
     ((h0, g0), _), ((h1, g1), _) = hermite_basis(money, grid.nodes[cell], grid.nodes[cell + 1])
     row = first + cell
 
-    def pick(values: FloatArray, step: int) -> FloatArray:
-        # Without conversions money is the same for all tax-free nodes: whole rows are read at once.
-        return values[row + step, np.arange(n3)] if s.conversions else values[row[..., 0] + step]
-
-    value = h0 * pick(level, 0) + g0 * pick(slope, 0) + h1 * pick(level, 1) + g1 * pick(slope, 1)
+    at, after = row * n3 + np.arange(n3), (row + 1) * n3 + np.arange(n3)
+    levels, slopes = level.ravel(), slope.ravel()
+    value = h0 * levels[at] + g0 * slopes[at] + h1 * levels[after] + g1 * slopes[after]
     full = np.full((n1, n2, n2, n3), -np.inf)
     full[:, a, j, :] = value
     best = full.argmax(axis=2)

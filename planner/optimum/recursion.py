@@ -101,7 +101,7 @@ def build_grids(problem: Problem, settings: SolverSettings) -> tuple[LogGrid, Lo
 
 
 def cash_range(problem: Problem, grids: tuple[LogGrid, LogGrid, LogGrid]) -> tuple[float, float]:
-    """Least and largest cash on hand that any node and choice can give."""
+    """Least and largest money (cash and tax-free) that any node and choice can give."""
     low, high = 0.0, 0.0
     for t in range(problem.n_years):
         for h in range(problem.n_statuses):
@@ -110,8 +110,7 @@ def cash_range(problem: Problem, grids: tuple[LogGrid, LogGrid, LogGrid]) -> tup
             kept = float(np.min(tax.x - tax.y)) if tax.x.size > 1 else -float(tax.y[0])
             low = min(low, float(problem.income[t, h]) + min(kept, 0.0))
             high = max(high, float(problem.income[t, h]))
-    pooled = grids[2].nodes[-1] if problem.conversions else 0.0
-    return low - grids[0].scale, high + grids[0].nodes[-1] + grids[1].nodes[-1] + pooled
+    return low - grids[0].scale, high + sum(float(grid.nodes[-1]) for grid in grids)
 
 
 def solve(
@@ -183,9 +182,8 @@ def solve(
                 grids[0].nodes,
                 grids[2].nodes,
                 float(weights[t, h]),
-                problem.conversions,
             )
-            surface = Surface(table, grids[1], grids[2], slopes[1], slopes[2])
+            surface = Surface(table, grids[1], grids[2], slopes[1], slopes[2], problem.conversions)
             choice = best_on_nodes(surface, grids[0].nodes, situation_of(problem, t, h))
             level[t, h] = choice.level
             gross[t, h] = choice.gross

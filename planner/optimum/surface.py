@@ -24,13 +24,19 @@ class Surface:
     """
 
     def __init__(
-        self, table: CashTable, deferred: LogGrid, free: LogGrid, slopes2: FloatArray, slopes3: FloatArray
+        self,
+        table: CashTable,
+        deferred: LogGrid,
+        free: LogGrid,
+        slopes2: FloatArray,
+        slopes3: FloatArray,
+        conversions: bool,
     ) -> None:
         self.table = table
         self.deferred = deferred
         self.free = free
         self.slopes3 = slopes3
-        self.sloped = table.pooled
+        self.sloped = conversions
         n2, n_cash, n3 = table.level.shape
         self.shape = (n2, n_cash, n3)
 
@@ -54,8 +60,8 @@ class Surface:
     ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         """Level and its slopes along cash, tax-deferred and tax-free at scattered points (n,).
 
-        `free` None: at tax-free node `node3`. The slope along tax-free is 0 there, and where the money
-        of the table is cash alone: it is not used.
+        `free` None: at tax-free node `node3`. The slope along tax-free (at given money) is found only
+        where conversions are allowed; nothing else needs it.
         """
         result = np.empty((4, cash.size))
         for start in range(0, cash.size, BLOCK):
