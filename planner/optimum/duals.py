@@ -189,12 +189,14 @@ class YearChoice:
         relaxed = self._relaxed_withdrawal(prices)
         plan = cash * (w2 - year.tax) + m3 * k + prices.held[:, TAX_DEFERRED] * y[:, TAX_DEFERRED]
         cash_held = (cash - prices.held[:, TAXABLE]) * y[:, TAXABLE]
+        # Contributions are priced at the best portfolio and invested in the one that is held.
+        paid_in = (prices.best - prices.held) * self.paid_in
         terms = [
             spend - got,
             cash_held + (prices.cash_limit - cash) * year.opening[:, TAXABLE],
-            (m3 - prices.held[:, TAX_FREE]) * y[:, TAX_FREE],
+            (m3 - prices.held[:, TAX_FREE]) * y[:, TAX_FREE] + paid_in[:, TAX_FREE],
             (m3 - cash) * w3,
-            relaxed - (plan - m2 * year.opening[:, TAX_DEFERRED]),
+            relaxed - (plan - m2 * year.opening[:, TAX_DEFERRED]) + paid_in[:, TAX_DEFERRED],
         ]
         return np.stack(terms, axis=1), spend + relaxed
 
