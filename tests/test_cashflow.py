@@ -9,7 +9,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
-from planner.cashflow import advance, least_withdrawal, withdraw_for_spending, withdraw_gross
+from planner.cashflow import advance, estate_money, least_withdrawal, withdraw_for_spending, withdraw_gross
 from planner.piecewise import PiecewiseLinear
 from planner.problem import TAX_DEFERRED, TAX_FREE, TAXABLE, Decision, Problem, State
 
@@ -279,3 +279,15 @@ def test_what_leaves_the_accounts_is_the_amount(
     left = (year.closing - year.growth).sum()
     most = balances[0] + accessible * balances[1] + balances[2]
     assert sum(balances) - left == pytest.approx(min(amount, most), abs=1e-6)
+
+
+def test_each_account_counts_in_the_estate_once():
+    """Tax-deferred money after heirs' tax of 30 %, the others whole, and the cash kept aside."""
+    problem = single_problem(2, heirs_tax_rate=0.3, cash_aside=5.0)
+    assert_allclose(estate_money(problem, 1_000.0 * np.eye(3)), [1_005.0, 705.0, 1_005.0], rtol=1e-15)
+
+
+def test_a_marginal_rate_of_exactly_one_is_passed_over():
+    """From 100 to 200 every unit goes in tax: 150 after tax takes 250."""
+    tax = PiecewiseLinear(np.array([0.0, 100.0, 200.0]), np.array([0.0, 0.0, 100.0]), 0.0)
+    assert least_withdrawal(tax, 150.0) == 250.0

@@ -259,3 +259,12 @@ def test_an_own_table_with_gaps_is_refused(own):
     with pytest.raises(InputError) as raised:
         own_table(own)
     assert code_of(raised) == ["life-table-invalid"]
+
+
+def test_an_own_table_may_say_that_death_is_certain_before_its_end():
+    """A chance of 0 or 1 is allowed at any age; beyond either it is not."""
+    table = own_table(OwnLifeTable((90, 91, 92), (0.0, 1.0, 1.0), (1.0, 0.5, 0.9)))
+    assert_array_equal(table.female, [0.0, 1.0, 1.0])
+    assert_array_equal(table.male, [1.0, 0.5, 1.0])
+    with pytest.raises(InputError):
+        own_table(OwnLifeTable((90, 91), (0.1, 1.0 + 1e-9), (0.1, 1.0)))

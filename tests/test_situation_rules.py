@@ -8,6 +8,7 @@ from households import couple, single
 
 from planner import shipped, taxes
 from planner.household import Account, AccountType, Person, Preferences, Spending, problems
+from planner.tax_provisions import Allowance
 
 UK = {"tax_rules": "uk-2025-26", "currency": "GBP"}
 POT = Account("Pot", "Lin", AccountType.TAX_DEFERRED, 200_000.0)
@@ -109,3 +110,9 @@ def test_rules_added_as_one_file(tmp_path, monkeypatch):
 def test_a_misspelt_key_in_rules_is_named(tmp_path):
     with pytest.raises(ValueError, match="minimum_above_neds"):
         taxes.parse("x", NEW_COUNTRY + '\n[cautions]\nminimum_above_neds = "x"\n')
+
+
+def test_an_allowance_is_given_in_the_years_of_its_law():
+    allowance = Allowance("x", {"single": 1.0}, per_person=True, from_age=65, first_year=2025, last_year=2028)
+    given = [allowance.times((64, 65, 66), year) for year in (2024, 2025, 2028, 2029)]
+    assert given == [0, 2, 2, 0]
