@@ -316,7 +316,8 @@ def snapshot(
         from dataclasses import replace
 
         from planner.commands.answers import Answer
-        from planner.reports.terminal_snapshot import snapshot_json, snapshot_screen
+        from planner.reports.export_views import snapshot_json
+        from planner.reports.terminal_snapshot import snapshot_screen
         from planner.snapshot import snapshot as take_snapshot
         from planner.workbook.reading import read_workbook
 

@@ -14,7 +14,8 @@ from planner.plan import PlanSettings
 from planner.plan_record import Range
 from planner.problem_building import build_problem
 from planner.projection import decide_at
-from planner.reports.terminal_snapshot import snapshot_json, snapshot_screen
+from planner.reports.export_views import snapshot_json
+from planner.reports.terminal_snapshot import snapshot_screen
 from planner.rules import AsAsked
 from planner.snapshot import fall_before_cut, needed_return, one_off_cost, snapshot
 

@@ -1,7 +1,8 @@
-"""Comparisons, stresses, searches and ladders for other programs: plain data with stable keys."""
+"""Comparisons, stresses, searches, ladders and snapshots for other programs: plain data with stable keys."""
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 
 import numpy as np
@@ -12,6 +13,7 @@ from planner.ladders import Rung
 from planner.plan_record import StrategyResult
 from planner.reports import export
 from planner.reports.export import Json, money, share
+from planner.snapshot import ONE_OFF, Snapshot
 from planner.surprises import StressResult
 
 
@@ -109,4 +111,64 @@ def rung_json(rung: Rung) -> Json:
             "p50": money(rung.estate.p50),
             "p90": money(rung.estate.p90),
         },
+    }
+
+
+def snapshot_json(shot: Snapshot) -> Json:
+    """The same numbers for other programs; stable keys."""
+    wanted, now = shot.wanted, shot.now
+    room = now.room_to_next_threshold
+    return {
+        "client": shot.household.client_name,
+        "plan_date": shot.household.plan_date.isoformat(),
+        "currency": shot.household.currency,
+        "savings": money(shot.savings),
+        "bills_covered": [{"who": c.who, "share": share(c.share)} for c in shot.covered],
+        "wanted_spending": None
+        if wanted is None
+        else {
+            "wanted": money(wanted.wanted),
+            "paid_for_life": share(wanted.paid_for_life),
+            "lasts_to_age_low": wanted.age_low,
+            "lasts_to_age_middle": wanted.age_middle,
+            "needed_return": share(wanted.needed_return),
+            "held_return": share(wanted.held_return),
+            "needed_to_age": wanted.lasts_to,
+        },
+        "spending_this_year": money(now.spending),
+        "fall_before_bills_are_cut": share(shot.fall_before_cut),
+        "one_off": {
+            "amount": money(ONE_OFF),
+            "a_year_for_life": money(shot.one_off_a_year),
+            "this_year": money(shot.one_off_this_year),
+        },
+        "tax": {
+            "amount": money(now.tax),
+            "share_of_income": share(shot.tax_share),
+            "rate_on_next": share(shot.next_rate),
+            "room_to_next_threshold": money(room) if math.isfinite(room) else None,
+        },
+        "still_due": [
+            {
+                "account": account.account,
+                "minimum_distribution": money(account.minimum_distribution),
+                "still_due": money(account.still_due),
+            }
+            for account in now.accounts
+            if account.minimum_distribution > 0
+        ],
+        "survivors": [
+            {
+                "survivor": s.name,
+                "income": money(s.income),
+                "after_tax": money(s.after_tax),
+                "essential": money(s.essential),
+            }
+            for s in shot.survivors
+        ],
+        "left_for_family": [
+            {"age": age, "p10": money(left.p10), "p50": money(left.p50), "p90": money(left.p90)}
+            for age, left in shot.family
+        ],
+        "costs": {name: money(cost) for name, cost in shot.costs},
     }
