@@ -86,3 +86,104 @@ def test_a_workbook_of_something_else(tmp_path):
         read_workbook(path)
     missing = {d.where for d in refused.value.diagnostics if d.code == "sheet-missing"}
     assert missing == {"Household", "People", "Accounts", "Spending", "Markets", "Portfolios"}
+
+
+def changed(path, part, change):
+    """The workbook with one part's text changed."""
+    with zipfile.ZipFile(path) as zipped:
+        parts = {name: zipped.read(name) for name in zipped.namelist()}
+    parts[part] = change(parts[part].decode("utf-8")).encode("utf-8")
+    path.write_bytes(archive(parts))
+    return path
+
+
+SHEET = "xl/worksheets/sheet3.xml"
+ENTITIES = '<!DOCTYPE w [<!ENTITY a "aaaaaaaaaa"><!ENTITY b "&a;&a;&a;&a;&a;&a;&a;&a;">]>'
+TAIL = "</sheetData>"
+HOSTILE = {
+    "entities": (lambda text: ENTITIES + text, "file-entities"),
+    "nested": (lambda text: text.replace(TAIL, "<a>" * 200 + "</a>" * 200 + TAIL), "file-damaged"),
+    "elements": (lambda text: text.replace(TAIL, "<row/>" * 400_001 + TAIL), "file-too-large"),
+    "merged": (
+        lambda text: text.replace(TAIL, TAIL + '<mergeCells><mergeCell ref="A1:XFD9"/></mergeCells>'),
+        "file-too-large",
+    ),
+    "merged columns": (
+        lambda text: text.replace(TAIL, TAIL + '<mergeCells><mergeCell ref="A:C"/></mergeCells>'),
+        "file-too-large",
+    ),
+}
+
+
+@pytest.mark.parametrize(("change", "code"), HOSTILE.values(), ids=HOSTILE)
+def test_what_would_take_the_memory_is_refused_before_it_is_opened(tmp_path, monkeypatch, change, code):
+    path = changed(saved(tmp_path), SHEET, change)
+    monkeypatch.setattr("openpyxl.load_workbook", None)  # never reached
+    assert found(path) == [(code, path.name)]
+
+
+def test_a_bomb_is_not_unpacked(tmp_path):
+    """100 MB of zeros in 100 kB; also where the part that says what the file is is the bomb."""
+    for name in ("xl/media/image1.png", "mimetype"):
+        content = io.BytesIO()
+        with zipfile.ZipFile(content, "w", zipfile.ZIP_DEFLATED) as zipped:
+            zipped.writestr("xl/workbook.xml", "<a/>")
+            zipped.writestr(name, bytes(100_000_000))
+        path = tmp_path / "client.xlsx"
+        path.write_bytes(content.getvalue())
+        assert found(path) == [("file-too-large", "client.xlsx")]
+
+
+def test_thousands_of_parts(tmp_path):
+    path = tmp_path / "client.xlsx"
+    path.write_bytes(archive({"xl/workbook.xml": "<a/>"} | {f"xl/{k}.xml": "" for k in range(1_000)}))
+    assert found(path) == [("file-too-large", "client.xlsx")]
+
+
+def test_pictures_and_parts_that_are_no_xml_are_let_be(tmp_path):
+    path = saved(tmp_path)
+    with zipfile.ZipFile(path, "a") as zipped:
+        zipped.writestr("xl/media/image1.png", b"\x89PNG\r\n")
+        zipped.writestr("xl/drawings/vmlDrawing1.vml", "<xml><br></xml>")
+    assert found(path) == []
+
+
+def fill(sheet, rows, columns, value):
+    def edit(workbook):
+        for row in range(40, 40 + rows):
+            for column in range(1, 1 + columns):
+                workbook[sheet].cell(row, column, value)
+
+    return edit
+
+
+def test_more_cells_or_rows_than_can_be_planned_with(tmp_path):
+    codes = [code for code, _ in found(saved(tmp_path, edit=fill("Income", 201, 100, "x")))]
+    assert codes == ["sheet-too-large"]
+    at = dict(found(saved(tmp_path, edit=fill("Accounts", 500, 1, "x"))))
+    assert at["table-too-long"].startswith("Accounts!")
+
+
+def set_cell(sheet, row, column, value):
+    return lambda workbook: setattr(workbook[sheet].cell(row, column), "value", value)
+
+
+def test_texts_too_long_and_numbers_beyond_all_bounds(tmp_path):
+    path = saved(tmp_path)
+    accounts = openpyxl.load_workbook(path)["Accounts"]
+    row = next(r[0].row for r in accounts.iter_rows() if r[0].value == "Bank")
+    long = found(saved(tmp_path, edit=set_cell("Accounts", row, 1, "x" * 201)))
+    assert ("text-too-long", f"Accounts!A{row}") in long
+    with zipfile.ZipFile(path) as zipped:
+        part = next(name for name in zipped.namelist() if b"<v>300000</v>" in zipped.read(name))
+    huge = changed(path, part, lambda text: text.replace("<v>300000</v>", "<v>1e999</v>"))
+    assert found(huge) == [("number-not-finite", f"Accounts!D{row}")]
+
+
+def test_characters_that_steer_a_terminal_are_dropped(tmp_path):
+    path = saved(tmp_path, edit=lambda book: None)
+    book = openpyxl.load_workbook(path)
+    place = next(c for row in book["Household"].iter_rows() for c in row if c.value == "Sample")
+    place.value = "Sam\x9b31mple\u202e"
+    book.save(path)
+    assert read_workbook(path).household.client_name == "Sam31mple"

@@ -358,7 +358,8 @@ def parse(field: Field, entry: Entry) -> object:
     """
     if entry.fault is not None:
         raise CellProblem(*entry.fault)
-    longest = LONGEST_TEXT if field.kind is Kind.TEXT else LONGEST_VALUE
+    # A text that must be there is a name; the others are the practice's own wording.
+    longest = LONGEST_TEXT if field.kind is Kind.TEXT and not field.required else LONGEST_VALUE
     if isinstance(entry.value, str) and len(entry.value) > longest:
         message = f"found a text of {len(entry.value):,} characters; expected at most {longest:,}"
         raise CellProblem("text-too-long", message)
