@@ -1,6 +1,7 @@
 """Files that are no sound .xlsx workbook: each a refusal with its own code, never a traceback."""
 
 import io
+import re
 import zipfile
 
 import openpyxl
@@ -178,6 +179,16 @@ def test_texts_too_long_and_numbers_beyond_all_bounds(tmp_path):
         part = next(name for name in zipped.namelist() if b"<v>300000</v>" in zipped.read(name))
     huge = changed(path, part, lambda text: text.replace("<v>300000</v>", "<v>1e999</v>"))
     assert found(huge) == [("number-not-finite", f"Accounts!D{row}")]
+
+
+def test_a_number_format_that_is_not_there(tmp_path):
+    """The dates can no longer be told from numbers, and are named; nothing else is the matter."""
+    path = saved(tmp_path)
+    pattern = r"<numFmts.*?</numFmts>"
+    codes = [
+        code for code, _ in found(changed(path, "xl/styles.xml", lambda text: re.sub(pattern, "", text)))
+    ]
+    assert codes == ["not-a-date"] * 3
 
 
 def test_characters_that_steer_a_terminal_are_dropped(tmp_path):

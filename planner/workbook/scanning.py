@@ -130,9 +130,16 @@ def _grid(formulas: Worksheet, values: Worksheet | None) -> Grid:
                 value = "number"
         elif value is not None and not isinstance(value, bool) and not hasattr(value, "year"):
             value = str(value)  # times of day and the like: shown in the message, never valid
-        is_percentage = "%" in str(cell.number_format) and isinstance(value, int | float)
+        is_percentage = "%" in _number_format(cell) and isinstance(value, int | float)
         grid[cell.row, cell.column] = Entry(place, value, is_percentage, fault)  # type: ignore[arg-type]
     return grid
+
+
+def _number_format(cell: Cell | MergedCell) -> str:
+    try:
+        return str(cell.number_format)
+    except (IndexError, KeyError):  # a style that the file names but does not hold
+        return ""
 
 
 def _match_sheets(workbook: Workbook, problems: list[Diagnostic]) -> dict[str, str]:
