@@ -28,7 +28,9 @@ from planner.workbook.data import WorkbookData
 from planner.workbook.reading import ReadWorkbook
 
 # Small grids and few futures: these tests are about assembly, not about accuracy.
-QUICK = PlanSettings(n_paths=1500, n_what_if_paths=300, solver=SolverSettings(8, 8, 6, 30), what_ifs=False)
+QUICK = PlanSettings(
+    n_paths=1500, n_what_if_paths=300, solver=SolverSettings(8, 8, 6, 30, scale=25.0), what_ifs=False
+)
 CENT = 0.005
 
 
