@@ -23,8 +23,10 @@ from every_path import (
 )
 from tree_oracle import TreeOptimum, random_problem, tree_optimum, value_on_tree
 
+from planner.cashflow import Year
 from planner.markets import lognormal_returns
 from planner.optimum.bound import TERMS, PriceReader, prove
+from planner.optimum.duals import YearChoice
 from planner.optimum.policy import OptimalPolicy
 from planner.optimum.recursion import SolverSettings, solve
 from planner.outcomes import path_utilities
@@ -171,6 +173,35 @@ def test_contributions_invested_in_another_portfolio_than_the_best() -> None:
     paid[0, 0, 1:] = 5_000.0, 2_000.0
     problem = replace(problem, contribution=paid)
     check_held(problem, tree_optimum(problem, split=True).lower, plan.policy)
+
+
+class Saves(Holds):
+    """A policy that takes no more from tax-deferred than it must."""
+
+    def decide(self, problem: Problem, t: int, state: State) -> Decision:
+        decision = super().decide(problem, t, state)
+        nothing = np.zeros_like(decision.withdraw)
+        return replace(decision, withdraw=nothing, convert=nothing)
+
+
+@pytest.mark.parametrize("seed", [seed for seed, n_portfolios in HOUSEHOLDS if n_portfolios > 1])
+def test_no_strategy_holds_more_tax_deferred_than_the_cap(seed: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Along paths that save as much as they can in either portfolio; 1e-12 for rounding."""
+    problem, _, plan = solved(seed, 2)
+    found = []
+    of = YearChoice.of
+
+    def noted(problem: Problem, t: int, h: int, year: Year, most: np.ndarray) -> YearChoice:
+        found.append((year.opening[:, 1], most))
+        return of(problem, t, h, year, most)
+
+    monkeypatch.setattr(YearChoice, "of", noted)
+    for portfolio in range(2):
+        saver = Saves(plan.policy, portfolio)
+        exact_gaps(problem, saver, PriceReader(saver), 1, np.random.default_rng(0))
+    assert len(found) >= 6
+    for held, most in found:
+        assert (held <= most * (1 + 1e-12)).all()
 
 
 def test_solved_prices_come_near_the_tree() -> None:
