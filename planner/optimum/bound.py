@@ -42,6 +42,7 @@ from planner.simulation import Scenarios, draw_scenarios
 
 EMPTY = 1e-6  # share of wealth below which an account counts as empty
 LITTLE = 0.1  # essential years below which tax-free money is priced as read, at the cost of a slack
+STEADY = 1.1  # most by which tax-deferred's factor exceeds cash's while the minimum distribution binds
 PILOT_PATHS = 64
 TERMS = ("spending", "taxable held", "tax-free held", "tax-free spent", "tax-deferred", "estate")
 
@@ -253,6 +254,13 @@ class _Proof:
         # Without a tax-free account nothing limits the price of cash from above but its own limit.
         m3 = limit[:, TAX_FREE if self.problem.has_account[TAX_FREE] else TAXABLE]
         start = np.minimum(np.minimum(raw[:, TAXABLE], limit[:, TAXABLE]), m3)
+        # Where the minimum distribution binds, an error of m2 / l would grow by 1 / (1 - d) a year: cash is
+        # priced no higher than tax-deferred, in proportion to the readings, and that factor no higher than
+        # cash's.
+        binding = choice.at_minimum
+        with np.errstate(over="ignore"):
+            in_proportion = raw[:, TAXABLE] * (m2 / raw[:, TAX_DEFERRED])
+        start = np.where(binding, np.clip(in_proportion, 0.5 * start, start), start)
         estate_most = expect.estate.max(axis=1)
         little = choice.left + choice.paid_in <= self.little
         # The estate's price keeps pace with that of an account that holds money, and within all limits.
@@ -269,6 +277,9 @@ class _Proof:
         # pretending to hold it; (nearly) empty tax-free follows tax-deferred's factor.
         target = choice.deferred_target(start, m2, m3, self.follow_minimum)
         deferred = expect.factor(TAX_DEFERRED, target, estate)
+        in_step = STEADY * start / raw[:, TAXABLE]
+        holds = binding & ~little[:, TAX_DEFERRED]
+        deferred = np.where(holds, np.minimum(deferred, in_step), deferred)
         usual = np.where(little[:, TAX_DEFERRED], 1.0, deferred)
         free = expect.factor(TAX_FREE, m3, estate)
         free = np.where(little[:, TAX_FREE], np.minimum(free, usual), free)

@@ -5,10 +5,13 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from planner.cashflow import Year
 from planner.piecewise import FloatArray, PiecewiseLinear
 from planner.problem import TAX_DEFERRED, TAX_FREE, TAXABLE, Problem
+
+BoolArray = NDArray[np.bool_]
 
 LARGEST_FACTOR = 4.0  # on the reading of a price; only empty accounts come near it
 
@@ -117,6 +120,12 @@ class YearChoice:
         """G = w2 + k."""
         return np.asarray(self.year.withdrawal[:, TAX_DEFERRED] + self.year.conversion)
 
+    @property
+    def at_minimum(self) -> BoolArray:
+        """Whether g is the minimum distribution; nowhere in years without one."""
+        d = float(self.problem.minimum_share[self.t, self.h])
+        return np.asarray((self.gross <= d * self.year.opening[:, TAX_DEFERRED] * (1 + 1e-9)) & (d > 0))
+
     def rates(self) -> tuple[FloatArray, FloatArray]:
         """Marginal tax rate just below and just above the plan's g."""
         x, slopes = self.tax.x, self.tax.slopes
@@ -161,8 +170,7 @@ class YearChoice:
             return free
         kept = (1.0 - self.rates()[1]) * cash
         bound = (m2 - d * kept) / (1.0 - d)
-        binding = self.gross <= d * self.year.opening[:, TAX_DEFERRED] * (1 + 1e-9)
-        binding &= bound > kept + spread
+        binding = self.at_minimum & (bound > kept + spread)
         return np.where(binding, np.where(follow_minimum, bound, np.minimum(bound, free)), free)
 
     def cash_prices(self, raw: FloatArray, prices: YearPrices) -> list[FloatArray]:

@@ -105,7 +105,7 @@ def _moved(maps: tuple[FloatArray, ...], cells: tuple[IntArray, ...] | None, lev
     first = level.reshape(1, n1, n2 * n3)
     moved = maps[0] @ first
     if cells is not None:
-        _keep_between(moved, np.broadcast_to(first, (n_maps, n1, n2 * n3)), cells[0])
+        _keep_between(moved, first, cells[0])
     for axis, n, rest in ((1, n2, n3 * n1), (2, n3, n1 * n2)):
         before = moved.reshape(n_maps, -1, n * rest // (n1 if axis == 1 else n2))
         # Turn the leading axis to the end: (maps, a, b c) -> (maps, b, c a).
@@ -122,10 +122,14 @@ def _moved(maps: tuple[FloatArray, ...], cells: tuple[IntArray, ...] | None, lev
 
 def _keep_between(values: FloatArray, ends: FloatArray, cells: IntArray) -> None:
     """Keep rows of values (maps, n, m) between rows cell and cell + 1 of ends, in place; -1 is free."""
-    for kept, row, cell in zip(values, ends, cells, strict=True):
-        free = np.flatnonzero(cell < 0)
-        beyond = kept[free]
-        at = np.maximum(cell, 0)
-        np.maximum(kept, row[at], out=kept)
-        np.minimum(kept, row[np.minimum(at + 1, row.shape[0] - 1)], out=kept)
-        kept[free] = beyond
+    n_maps, n, m = values.shape
+    rows = ends.reshape(-1, m)
+    first = np.arange(n_maps)[:, None] * n if rows.shape[0] > n else 0
+    free = np.nonzero(cells < 0)
+    beyond = values[free]
+    at = (first + np.maximum(cells, 0)).ravel()
+    after = (first + np.minimum(np.maximum(cells, 0) + 1, n - 1)).ravel()
+    flat = values.reshape(-1, m)
+    np.maximum(flat, rows.take(at, axis=0), out=flat)
+    np.minimum(flat, rows.take(after, axis=0), out=flat)
+    values[free] = beyond

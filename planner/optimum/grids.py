@@ -137,6 +137,25 @@ def limited_slopes(slopes: FloatArray, values: FloatArray, nodes: FloatArray) ->
     """
     if nodes.size == 1:
         return slopes
+    flatter, steeper = _chords(values, nodes)
+    return np.clip(slopes, flatter, np.maximum(flatter, np.minimum(steeper, 3.0 * flatter)))
+
+
+def plausible_slopes(slopes: FloatArray, values: FloatArray, nodes: FloatArray) -> FloatArray:
+    """Keep slopes along axis 0 between half the flatter and twice the steeper chord beside a node.
+
+    For slopes that are known better than chords know them, but for a rare failure. The first node is
+    free above: an account that starts to be used up may be worth much more there.
+    """
+    if nodes.size == 1:
+        return slopes
+    flatter, steeper = _chords(values, nodes)
+    steeper[0] = np.inf
+    return np.clip(slopes, np.maximum(0.5 * flatter, 0.0), np.maximum(2.0 * steeper, 0.0))
+
+
+def _chords(values: FloatArray, nodes: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Flatter and steeper of the chords on either side of each node of axis 0."""
     gaps = np.diff(nodes).reshape((-1,) + (1,) * (values.ndim - 1))
     chords = np.diff(values, axis=0) / gaps
     left = np.concatenate([chords[:1], chords])
@@ -144,7 +163,7 @@ def limited_slopes(slopes: FloatArray, values: FloatArray, nodes: FloatArray) ->
     flatter, steeper = np.minimum(left, right), np.maximum(left, right)
     # The last node has one chord; a concave function is flatter there.
     flatter[-1] *= 0.5
-    return np.clip(slopes, flatter, np.maximum(flatter, np.minimum(steeper, 3.0 * flatter)))
+    return flatter, steeper
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -74,7 +74,11 @@ class Felicity:
         c = self.need * self.utility.inverse_marginal(price)
         line = float(self.utility.marginal(np.array(self.utility.floor * 0.5)))
         # On the straight line below the floor nothing is spent at a price above its slope.
-        return np.minimum(np.where(price > line, 0.0, c), self.ceiling * self.need)
+        return self.at_most(np.where(price > line, 0.0, c))
+
+    def at_most(self, c: FloatArray) -> FloatArray:
+        """Spending c held to the ceiling."""
+        return np.minimum(c, self.ceiling * self.need)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -20,6 +20,7 @@ from planner.piecewise import FloatArray, PiecewiseLinear
 from planner.problem import IntArray, Problem
 
 ROOT_STEPS = 3  # false-position steps on the first-order condition between two candidates
+SMALLEST_GAIN = 1e-7  # share of the level below which a step along its slope is not worth taking
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -75,6 +76,10 @@ def situation_of(problem: Problem, t: int, h: int) -> Situation:
 
 # Money, tax-deferred left, tax-free node, tax-free (None on its node), slopes of money and tax-free in g.
 Place = tuple[FloatArray, FloatArray, IntArray, FloatArray | None, FloatArray, float]
+
+
+# Points and the g tried there.
+Tries = tuple[IntArray, FloatArray]
 
 
 class Outer:
@@ -135,33 +140,45 @@ class Outer:
         return self.tax_slopes[below], self.tax_slopes[above]
 
     def search(
-        self, level: FloatArray, gross: FloatArray, around: tuple[FloatArray, FloatArray] | None = None
+        self,
+        gross: FloatArray,
+        level: FloatArray | None = None,
+        around: tuple[FloatArray, FloatArray] | None = None,
+        at_bounds: tuple[IntArray, IntArray] | None = None,
     ) -> OuterChoice:
         """Best g from a start: bounds, then kinks and nodes near it, then the first-order condition.
 
         Parameters
         ----------
-        level, gross : ndarray of shape (n,)
-            Start and its level; both are overwritten.
+        gross : ndarray of shape (n,)
+            Start.
+        level : ndarray of shape (n,) or None
+            The start's level where it is known.
         around : two ndarrays of shape (n,)
             Range of g in which kinks of tax (and, off the nodes, tax-deferred nodes) are tried;
             None = up to the tax-deferred nodes on either side.
+        at_bounds : two ndarrays of int
+            Points at which the least and the largest g are tried; None = all.
         """
-        everywhere = np.arange(level.size)
+        everywhere = np.arange(gross.size)
         if self.nodes2.size == 1:
-            level, _, along, exchange = self.evaluate(everywhere, gross, np.zeros(level.size))
-            return OuterChoice(level, gross, along, np.ones(level.size), np.zeros(level.size))
-        if self.situation.minimum_share > 0 or not self.on_nodes:
-            self._try(level, gross, everywhere, self.low)
-        if self.situation.accessible_share < 1 or not self.on_nodes:
-            self._try(level, gross, everywhere, self.high)
+            level, _, along, exchange = self.evaluate(everywhere, gross, np.zeros(gross.size))
+            return OuterChoice(level, gross, along, np.ones(gross.size), np.zeros(gross.size))
         lower, upper = self.neighbours(everywhere, gross) if around is None else around
-        self._try_between(level, gross, np.unique(self.situation.tax.x), lower, upper)
+        tries = [self._between(np.unique(self.situation.tax.x), lower, upper)]
         if not self.on_nodes:
             nodes = -self.nodes2[::-1]
-            self._try_between(level, gross, nodes, lower - self.x2, upper - self.x2, self.x2)
-        along, exchange = np.empty(level.size), np.empty(level.size)
-        self._first_order(level, gross, along, exchange)
+            tries.append(self._between(nodes, lower - self.x2, upper - self.x2, self.x2))
+        at_low, at_high = (everywhere, everywhere) if at_bounds is None else at_bounds
+        if self.situation.minimum_share > 0 or not self.on_nodes:
+            tries.append((at_low, self.low[at_low]))
+        if self.situation.accessible_share < 1 or not self.on_nodes:
+            tries.append((at_high, self.high[at_high]))
+        if level is None:
+            level = np.full(gross.size, -np.inf)
+            tries.append((everywhere, gross))
+        gross = self._best(level, gross, tries)
+        level, gross, along, exchange = self._first_order(gross)
         below, above = self.side_slopes(gross)
         least = np.where(gross >= self.high, -np.inf, 1.0 - np.maximum(above, below))
         most = np.where(gross <= self.low, np.inf, 1.0 - np.minimum(above, below))
@@ -192,38 +209,34 @@ class Outer:
         slope = np.where(gross >= self.high, (1 - s) * kept + s * taken - d * spread, slope)
         return np.asarray(slope)
 
-    def _try(self, level: FloatArray, gross: FloatArray, point: IntArray, g: FloatArray) -> None:
-        value = self.evaluate(point, g, np.zeros(g.size))[0]
-        np.copyto(gross, g, where=value > level)
-        np.maximum(level, value, out=level)
-
-    def _try_between(
-        self,
-        level: FloatArray,
-        gross: FloatArray,
-        places: FloatArray,
-        lower: FloatArray,
-        upper: FloatArray,
-        shift: FloatArray | None = None,
-    ) -> None:
-        """Try g = place (+ shift of the point) for every place strictly between lower and upper."""
+    def _between(
+        self, places: FloatArray, lower: FloatArray, upper: FloatArray, shift: FloatArray | None = None
+    ) -> Tries:
+        """Every g = place (+ shift of the point) strictly between lower and upper, with its point."""
         start = np.searchsorted(places, lower, side="right")
         stop = np.searchsorted(places, upper, side="left")
         count = np.maximum(stop - start, 0)
-        point = np.repeat(np.arange(level.size), count)
-        if not point.size:
-            return
+        point = np.repeat(np.arange(lower.size), count)
         offset = np.arange(point.size) - np.repeat(np.cumsum(count) - count, count)
         g = places[start[point] + offset]
         if shift is not None:
             g = g + shift[point]
-        g = np.clip(g, self.low[point], self.high[point])
-        value = self.evaluate(point, g, np.zeros(g.size))[0]
+        return point, np.clip(g, self.low[point], self.high[point])
+
+    def _best(self, level: FloatArray, gross: FloatArray, tries: list[Tries]) -> FloatArray:
+        """The g of the highest level among the start's (`level`) and what is tried, the last of equals."""
+        point = np.concatenate([points for points, _ in tries])
+        if not point.size:
+            return gross
+        g = np.concatenate([places for _, places in tries])
+        cash, deferred, l3, free, _, _ = self.place(point, g, np.zeros(g.size))
+        value = self.surface.level(cash, deferred, l3, free)
         best = level.copy()
         np.maximum.at(best, point, value)
         wins = (value > level[point]) & (value == best[point])
+        gross = gross.copy()
         gross[point[wins]] = g[wins]
-        level[:] = best
+        return gross
 
     def neighbours(self, point: IntArray, g: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Withdrawals g that leave the tax-deferred nodes on either side, within the bounds."""
@@ -238,23 +251,20 @@ class Outer:
         upper = np.where(below >= 0, x2 - self.nodes2[np.maximum(below, 0)], high)
         return np.maximum(lower, low), np.minimum(upper, high)
 
-    def _first_order(
-        self,
-        level: FloatArray,
-        gross: FloatArray,
-        along: FloatArray,
-        exchange: FloatArray,
-    ) -> None:
-        """Move to the root of the first-order condition next to the best candidate, where there is one."""
-        point = np.arange(level.size)
+    def _first_order(self, gross: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+        """Move to the root of the first-order condition next to g, where there is one.
+
+        Returns
+        -------
+        level, gross, slope of the level along cash, exchange rate, each (n,)
+        """
+        point = np.arange(gross.size)
         rate_below, rate_above = self.side_slopes(gross)
-        _, slope_down, along[:], exchange[:] = self.evaluate(point, gross, rate_below)
+        level, slope_down, along, exchange = self.evaluate(point, gross, rate_below)
         slope_up = slope_down + (rate_below - rate_above) * along
         up = (slope_up > 0) & (gross < self.high)
         down = ~up & (slope_down < 0) & (gross > self.low)
         move = np.nonzero(up | down)[0]
-        if not move.size:
-            return
         upward = up[move]
         near = gross[move]
         near_slope = np.where(upward, slope_up[move], slope_down[move])
@@ -264,9 +274,15 @@ class Outer:
         last_kink = kinks[np.maximum(np.searchsorted(kinks[:-1], near, side="left") - 1, 0)]
         last_kink = np.where(last_kink < near, last_kink, -np.inf)
         far = np.where(upward, np.minimum(upper, next_kink), np.maximum(lower, last_kink))
+        # On the nodes every step is taken: the exchange rate found there becomes a price of the proof.
+        smallest = 0.0 if self.on_nodes else SMALLEST_GAIN
+        worth = np.flatnonzero(np.abs(near_slope * (far - near)) > smallest * np.abs(level[move]))
+        if not worth.size:
+            return level, gross, along, exchange
+        move, upward = move[worth], upward[worth]
+        near, far, near_slope = near[worth], far[worth], near_slope[worth]
         rate = np.where(upward, rate_above[move], rate_below[move])
-        best_level, best_gross = level[move], near.copy()
-        best_along, best_exchange = along[move], exchange[move]
+        best = [level[move], near.copy(), along[move], exchange[move]]
         far_slope = self.evaluate(move, far, rate)[1]
         moved_last = np.zeros(near.size, dtype=bool)
         for step in range(ROOT_STEPS):
@@ -274,11 +290,9 @@ class Outer:
             share = np.divide(near_slope, near_slope - far_slope, out=np.full(near.size, 0.5), where=crossing)
             trial = near + np.clip(share, 0.02, 0.98) * (far - near)
             value, slope, trial_along, trial_exchange = self.evaluate(move, trial, rate)
-            better = value > best_level
-            best_level = np.where(better, value, best_level)
-            best_gross = np.where(better, trial, best_gross)
-            best_along = np.where(better, trial_along, best_along)
-            best_exchange = np.where(better, trial_exchange, best_exchange)
+            better = value > best[0]
+            for kept, new in zip(best, (value, trial, trial_along, trial_exchange), strict=True):
+                np.copyto(kept, new, where=better)
             same = slope * near_slope > 0
             # Illinois: an end that stays twice in a row has its slope halved, so that both close in.
             stays = 1.0 - 0.5 * ((same == moved_last) & (step > 0))
@@ -288,12 +302,9 @@ class Outer:
                 np.where(same, far_slope * stays, slope),
             )
             moved_last = same
-        level[move], gross[move], along[move], exchange[move] = (
-            best_level,
-            best_gross,
-            best_along,
-            best_exchange,
-        )
+        gross = gross.copy()
+        level[move], gross[move], along[move], exchange[move] = best
+        return level, gross, along, exchange
 
 
 def best_on_nodes(surface: Surface, taxable: FloatArray, situation: Situation) -> OuterChoice:
@@ -307,7 +318,7 @@ def best_on_nodes(surface: Surface, taxable: FloatArray, situation: Situation) -
     else:
         on_nodes, gross_on_nodes = _node_levels(surface, taxable, situation)
         level, gross = on_nodes.ravel(), np.clip(gross_on_nodes.ravel(), outer.low, outer.high)
-    choice = outer.search(level, gross)
+    choice = outer.search(gross, level)
     return OuterChoice(
         choice.level.reshape(shape),
         choice.gross.reshape(shape),
@@ -346,7 +357,7 @@ def _node_levels(
         level, slope = table.level.reshape(-1, n3), table.slope.reshape(-1, n3)
         first = j[None, :, None] * n_cash
     cell = grid.cell(money)
-    ((h0, g0), _), ((h1, g1), _) = hermite_basis(money, grid.nodes[cell], grid.nodes[cell + 1])
+    ((h0, h1), (g0, g1)), _ = hermite_basis(money, grid.nodes[cell], grid.nodes[cell + 1], False)
     row = first + cell
 
     at, after = row * n3 + np.arange(n3), (row + 1) * n3 + np.arange(n3)

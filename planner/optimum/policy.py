@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from planner.optimum.grids import LogGrid
 from planner.optimum.inner import TINY_SLOPE
@@ -13,6 +15,8 @@ from planner.optimum.surface import Surface
 from planner.piecewise import FloatArray
 from planner.preferences import SpendingUtility
 from planner.problem import TAX_DEFERRED, TAX_FREE, Decision, IntArray, Problem, State
+
+BoolArray = NDArray[np.bool_]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -76,6 +80,10 @@ class OptimalPolicy:
         level = self.certainty_equivalent(balances, t, status)
         return np.asarray(self.weights[t, status] * self.smooth.value(level))
 
+    def value_at_scale(self, opening: FloatArray) -> Callable[[FloatArray], FloatArray]:
+        """Function of scales s (n,): V_0 at `opening` (3,) with all accounts multiplied by each s."""
+        return lambda scales: self.value(scales[:, None] * opening)
+
     def level_spending(self, balances: FloatArray) -> float:
         """f^-1(V_0 / A_0): steady spending worth as much (meaningful without a legacy)."""
         return float(self.utility.inverse(self.value(balances[None, :])[0] / self.weights[0, 0]))
@@ -118,9 +126,9 @@ class OptimalPolicy:
         everywhere = np.arange(choice.gross.size)
         cash, left, _, free = outer.place(everywhere, choice.gross, np.zeros(everywhere.size))[:4]
         assert free is not None
-        spending = outer.surface.spending(cash, left, free)
         slope = np.maximum(choice.cash_slope, TINY_SLOPE)
         price = self.weights[t, h] * self.smooth.marginal(choice.level) * slope
+        spending = outer.surface.spending(cash, left, free, price)
         return Reading(spending, choice.gross, np.asarray(price), choice.exchange)
 
     def _choose(self, t: int, h: int, balances: FloatArray) -> tuple[Outer, OuterChoice]:
@@ -130,9 +138,20 @@ class OptimalPolicy:
             self.surfaces[t][h], self.situations[t][h], (balances[:, 0], balances[:, 1], balances[:, 2])
         )
         gross = np.clip((nodes * weight).sum(axis=0), outer.low, outer.high)
-        everywhere = np.arange(gross.size)
-        level = outer.evaluate(everywhere, gross, np.zeros(gross.size))[0]
-        return outer, outer.search(level, gross, (nodes.min(axis=0), nodes.max(axis=0)))
+        # The bounds are tried where they are best on a corner of the cell.
+        least, most = self._at_bounds(t, h)
+        at_bounds = np.flatnonzero(least[corner].any(axis=0)), np.flatnonzero(most[corner].any(axis=0))
+        return outer, outer.search(gross, None, (nodes.min(axis=0), nodes.max(axis=0)), at_bounds)
+
+    def _at_bounds(self, t: int, h: int) -> tuple[BoolArray, BoolArray]:
+        """On each node, flat: whether the best g is the least possible one; the largest."""
+        situation = self.situations[t][h]
+        x2 = self.grids[1].nodes[:, None]
+        gross = self.gross[t, h]
+        tolerance = 1e-9 * x2
+        least = gross <= situation.minimum_share * x2 + tolerance
+        most = gross >= situation.accessible_share * x2 - tolerance
+        return least.ravel(), most.ravel()
 
     def _corners(self, balances: FloatArray) -> tuple[IntArray, FloatArray]:
         """Flat node indices and weights of the enclosing cell: (8, n) or fewer for absent accounts."""

@@ -17,7 +17,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from planner.optimum.expectation import GrowthMaps, expected_value, growth_maps
-from planner.optimum.grids import CashGrid, LogGrid, derivative_matrix, limited_slopes
+from planner.optimum.grids import CashGrid, LogGrid, derivative_matrix, limited_slopes, plausible_slopes
 from planner.optimum.inner import TINY_SLOPE, Continuation, Felicity, cash_table
 from planner.optimum.outer import OuterChoice, best_on_nodes, situation_of
 from planner.optimum.policy import OptimalPolicy
@@ -183,11 +183,11 @@ def solve(
                 grids[2].nodes,
                 float(weights[t, h]),
             )
-            surface = Surface(table, grids[1], grids[2], slopes[1], slopes[2], problem.conversions)
+            surface = Surface(table, felicity, grids[1], grids[2], slopes[1], slopes[2], problem.conversions)
             choice = best_on_nodes(surface, grids[0].nodes, situation_of(problem, t, h))
             level[t, h] = choice.level
             gross[t, h] = choice.gross
-            found[t, h] = _slopes(choice, slopes[2], grids[2])
+            found[t, h] = _slopes(choice, slopes[2], grids)
             surfaces[t].append(surface)
         if progress is not None:
             progress((n_years - t) / n_years)
@@ -205,12 +205,16 @@ def solve(
     )
 
 
-def _slopes(choice: OuterChoice, along3: FloatArray, free: LogGrid) -> FloatArray:
+def _slopes(choice: OuterChoice, along3: FloatArray, grids: tuple[LogGrid, LogGrid, LogGrid]) -> FloatArray:
     """Slopes of the level along the three accounts, (3, n1, n2, n3); tax-free at least cash."""
     level = choice.level.transpose(2, 0, 1)
-    free_slope = limited_slopes(np.tensordot(along3, level, axes=1), level, free.nodes)
-    cash = np.maximum(choice.cash_slope, TINY_SLOPE)
-    return np.stack([cash, choice.slope2, np.maximum(free_slope.transpose(1, 2, 0), cash)])
+    free_slope = limited_slopes(np.tensordot(along3, level, axes=1), level, grids[2].nodes)
+    cash = plausible_slopes(choice.cash_slope, choice.level, grids[0].nodes)
+    cash = np.maximum(cash, TINY_SLOPE)
+    turned = (1, 0, 2)
+    level2, slope2 = choice.level.transpose(turned), choice.slope2.transpose(turned)
+    slope2 = plausible_slopes(slope2, level2, grids[1].nodes).transpose(turned)
+    return np.stack([cash, slope2, np.maximum(free_slope.transpose(1, 2, 0), cash)])
 
 
 def _continuation(

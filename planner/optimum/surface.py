@@ -5,13 +5,13 @@ from __future__ import annotations
 import numpy as np
 
 from planner.optimum.grids import LogGrid, limited_slopes
-from planner.optimum.inner import CashTable
+from planner.optimum.inner import CashTable, Felicity
 from planner.piecewise import FloatArray
 from planner.problem import IntArray
 
-# Hermite weights of (value, slope) and their derivatives, at the left and at the right node.
-Side = tuple[tuple[FloatArray, FloatArray], tuple[FloatArray, FloatArray]]
-Basis = tuple[Side, Side]
+# Hermite weights of values and of slopes, each (2, ...): at the left and at the right node.
+Side = tuple[FloatArray, FloatArray]
+Basis = tuple[Side, Side]  # and their derivatives
 
 
 BLOCK = 2048  # points at a time, so that their numbers stay in the processor's cache
@@ -26,6 +26,7 @@ class Surface:
     def __init__(
         self,
         table: CashTable,
+        felicity: Felicity,
         deferred: LogGrid,
         free: LogGrid,
         slopes2: FloatArray,
@@ -37,8 +38,11 @@ class Surface:
         self.free = free
         self.slopes3 = slopes3
         self.sloped = conversions
+        self.felicity = felicity
         n2, n_cash, n3 = table.level.shape
         self.shape = (n2, n_cash, n3)
+        money = table.grid.nodes[:, None]
+        self.keeps = (table.spending < money - 1e-9 * np.abs(money)).ravel()
 
         def along2(values: FloatArray) -> FloatArray:
             return (slopes2 @ values.reshape(n2, -1)).reshape(self.shape)
@@ -52,8 +56,8 @@ class Surface:
         level3 = level3.transpose(1, 2, 0)
         plain = [level, slope, level2, along2(slope)]
         sloped = [level3, along3(slope), along3(level2), along3(plain[3])]
-        # Eight numbers a node, next to one another: one cache line a corner.
-        self.packed = np.stack(plain + sloped, axis=-1).reshape(-1, 8)
+        # Eight numbers a node, each in a row of its own: what is taken from a row is contiguous.
+        self.numbers = np.stack(plain + sloped).reshape(8, -1)
 
     def __call__(
         self, cash: FloatArray, deferred: FloatArray, node3: IntArray, free: FloatArray | None
@@ -63,13 +67,31 @@ class Surface:
         `free` None: at tax-free node `node3`. The slope along tax-free (at given money) is found only
         where conversions are allowed; nothing else needs it.
         """
-        result = np.empty((4, cash.size))
+        result = np.zeros((4, cash.size))
+        self._fill(cash, deferred, node3, free, result)
+        return result[0], result[1], result[2], result[3]
+
+    def level(
+        self, cash: FloatArray, deferred: FloatArray, node3: IntArray, free: FloatArray | None
+    ) -> FloatArray:
+        """The level alone, as `__call__` gives it, for about two thirds of the work."""
+        result = np.zeros((1, cash.size))
+        self._fill(cash, deferred, node3, free, result)
+        return result[0]
+
+    def _fill(
+        self,
+        cash: FloatArray,
+        deferred: FloatArray,
+        node3: IntArray,
+        free: FloatArray | None,
+        result: FloatArray,
+    ) -> None:
         for start in range(0, cash.size, BLOCK):
             part = slice(start, start + BLOCK)
             self._block(
                 cash[part], deferred[part], node3[part], None if free is None else free[part], result[:, part]
             )
-        return result[0], result[1], result[2], result[3]
 
     def _block(
         self,
@@ -79,98 +101,141 @@ class Surface:
         free: FloatArray | None,
         result: FloatArray,
     ) -> None:
+        """Fill the level alone (1, n), or with its slopes (4, n).
+
+        One axis after another on arrays (number, tax-deferred side, money side, n): few calls on
+        larger arrays, because a call of numpy costs as much as the arithmetic on a thousand points.
+        """
         grid = self.table.grid
         n2, n_cash, n3 = self.shape
-        m = grid.cell(cash)
-        basis_m = hermite_basis(cash, grid.nodes[m], grid.nodes[m + 1])
-        j = self.deferred.cell(deferred)
-        basis_2: tuple[Side | None, ...] = (None,)
-        if n2 > 1:
-            basis_2 = hermite_basis(deferred, self.deferred.nodes[j], self.deferred.nodes[j + 1])
+        with_slopes = result.shape[0] > 1
+        m, j = grid.cell(cash), self.deferred.cell(deferred)
         basis_3 = None
         if free is not None and n3 > 1:
             node3 = self.free.cell(free)
-            basis_3 = hermite_basis(free, self.free.nodes[node3], self.free.nodes[node3 + 1])
-        base = (j * n_cash + m) * n3 + node3
-        result[:] = 0.0
-        for row, side_2 in enumerate(basis_2):
-            for side, ((hm, gm), (dhm, dgm)) in enumerate(basis_m):
-                at = base + (row * n_cash + side) * n3
-                corner, along = self._tax_free(at, basis_3)
-                v, vm, v2, vm2 = corner
-                flat, turned = hm * v + gm * vm, dhm * v + dgm * vm
-                if side_2 is None:
-                    result[0] += flat
-                    result[1] += turned
-                else:
-                    (h2, g2), (dh2, dg2) = side_2
-                    cross = hm * v2 + gm * vm2
-                    result[0] += h2 * flat + g2 * cross
-                    result[1] += h2 * turned + g2 * (dhm * v2 + dgm * vm2)
-                    result[2] += dh2 * flat + dg2 * cross
-                if along:
-                    deep = hm * along[0] + gm * along[1]
-                    if side_2 is None:
-                        result[3] += deep
-                    else:
-                        result[3] += h2 * deep + g2 * (hm * along[2] + gm * along[3])
+            with_third = with_slopes and self.sloped
+            basis_3 = hermite_basis(free, self.free.nodes[node3], self.free.nodes[node3 + 1], with_third)
+        sides_2 = 2 if n2 > 1 else 1
+        corners = n3 * (n_cash * np.arange(sides_2)[:, None, None] + np.arange(2)[:, None])
+        at = corners + ((j * n_cash + m) * n3 + node3)
+        value, along = self._tax_free(at, basis_3, 2 * sides_2)
 
-    def _tax_free(self, at: IntArray, basis: Basis | None) -> tuple[list[FloatArray], list[FloatArray]]:
-        """Node numbers interpolated along tax-free, four of (n,), and their slopes; none on a node."""
-        left = self.packed[at].T
+        value_m, slope_m = hermite_basis(cash, grid.nodes[m], grid.nodes[m + 1], with_slopes)
+        flat = _contract(value_m, value)
+        turned = _contract(slope_m, value) if with_slopes else flat
+        deep = _contract(value_m, along) if along is not None else None
+        if sides_2 == 1:
+            result[0] = flat[0, 0]
+            if with_slopes:
+                result[1], result[2] = turned[0, 0], 0.0
+                result[3] = 0.0 if deep is None else deep[0, 0]
+            return
+        nodes = self.deferred.nodes
+        value_2, slope_2 = hermite_basis(deferred, nodes[j], nodes[j + 1], with_slopes)
+        result[0] = _last_contract(value_2, flat)
+        if with_slopes:
+            result[1] = _last_contract(value_2, turned)
+            result[2] = _last_contract(slope_2, flat)
+            result[3] = 0.0 if deep is None else _last_contract(value_2, deep)
+        # Value rises along every axis: products of slopes may not lift it above the cell's upper corner.
+        inside = (cash <= grid.nodes[m + 1]) & (deferred <= nodes[j + 1])
+        if free is not None and n3 > 1:
+            inside &= free <= self.free.nodes[node3 + 1]
+        upper = self.numbers[0].take(at[-1, -1] + (basis_3 is not None), mode="clip")
+        np.minimum(result[0], upper, out=result[0], where=inside)
+
+    def _tax_free(
+        self, at: IntArray, basis: Basis | None, n_numbers: int
+    ) -> tuple[FloatArray, FloatArray | None]:
+        """Numbers at the corners `at` (sides, 2, n), interpolated along tax-free, and their slopes.
+
+        Arrays (n_numbers, sides, 2, n): value, slope in money, and both differentiated in tax-deferred.
+        """
+        # Indices are within range by construction; mode "clip" saves numpy a copy.
         if basis is None:
-            return list(left[:4]), []
-        right = self.packed[at + 1].T
-        ((h0, g0), (dh0, dg0)), ((h1, g1), (dh1, dg1)) = basis
-        value = [h0 * left[q] + g0 * left[q + 4] + h1 * right[q] + g1 * right[q + 4] for q in range(4)]
-        if not self.sloped:
-            return value, []
-        return value, [
-            dh0 * left[q] + dg0 * left[q + 4] + dh1 * right[q] + dg1 * right[q + 4] for q in range(4)
-        ]
+            return self.numbers[:n_numbers].take(at, axis=1, mode="clip"), None
+        left = self.numbers.take(at, axis=1, mode="clip")
+        right = self.numbers.take(at + 1, axis=1, mode="clip")
+        levels = left[:n_numbers], left[4 : 4 + n_numbers], right[:n_numbers], right[4 : 4 + n_numbers]
+        (heights, tilts), (height_slopes, tilt_slopes) = basis
 
-    def spending(self, cash: FloatArray, deferred: FloatArray, free: FloatArray) -> FloatArray:
-        """Spending at scattered points (n,), linear between the nodes.
+        def across(height: FloatArray, tilt: FloatArray) -> FloatArray:
+            total = height[0] * levels[0]
+            total += tilt[0] * levels[1]
+            total += height[1] * levels[2]
+            total += tilt[1] * levels[3]
+            return total
 
-        Linear because spending has kinks where it starts to follow cash one for one, and is itself
-        linear beyond them.
+        value = across(heights, tilts)
+        return value, across(height_slopes, tilt_slopes) if height_slopes.size else None
+
+    def spending(
+        self, cash: FloatArray, deferred: FloatArray, free: FloatArray, price: FloatArray
+    ) -> FloatArray:
+        """Spending at scattered points (n,), from its first-order condition f'(c/n) = price of money.
+
+        The price is smooth over a cell where spending itself turns. Where all money is spent at the
+        nodes around, so it is here.
         """
         grid = self.table.grid
         _, n_cash, n3 = self.shape
         m, j, i3 = grid.cell(cash), self.deferred.cell(deferred), self.free.cell(free)
-        total = np.zeros(cash.size)
-        table = self.table.spending.ravel()
-        width = grid.nodes[m + 1] - grid.nodes[m]
-        share = (cash - grid.nodes[m]) / width
-        for at2, weight2 in _linear(self.deferred, deferred, j):
-            for at3, weight3 in _linear(self.free, free, i3):
+        kept = np.zeros(cash.size, dtype=bool)
+        for at2 in (j, np.minimum(j + 1, self.deferred.size - 1)):
+            for at3 in (i3, np.minimum(i3 + 1, self.free.size - 1)):
                 base = (at2 * n_cash + m) * n3 + at3
-                left, right = table[base], table[base + n3]
-                total += weight2 * weight3 * (left + share * (right - left))
-        return total
+                kept |= self.keeps[base] | self.keeps[base + n3]
+        return np.where(kept, np.minimum(self.felicity.spend(price), cash), self.felicity.at_most(cash))
 
 
-def _linear(grid: LogGrid, x: FloatArray, cell: IntArray) -> list[tuple[IntArray, FloatArray]]:
-    """Node indices and weights of linear interpolation, straight on beyond the last node."""
-    if grid.size == 1:
-        return [(cell, np.ones(x.size))]
-    share = (x - grid.nodes[cell]) / (grid.nodes[cell + 1] - grid.nodes[cell])
-    return [(cell, 1.0 - share), (cell + 1, share)]
+def _contract(basis: Side, numbers: FloatArray) -> FloatArray:
+    """Weigh values and slopes on both sides of money: (2 k, sides, 2, n) -> (k, sides, n)."""
+    height, tilt = basis
+    both = height * numbers[0::2]
+    both += tilt * numbers[1::2]
+    return np.asarray(both[:, :, 0] + both[:, :, 1])
 
 
-def hermite_basis(x: FloatArray, left: FloatArray, right: FloatArray) -> Basis:
-    """Hermite weights: per side ((value, slope), (their derivatives)); straight beyond `right`."""
+def _last_contract(basis: Side, numbers: FloatArray) -> FloatArray:
+    """The same along tax-deferred: (value and slope, 2 sides, n) -> (n,)."""
+    height, tilt = basis
+    both = height * numbers[0]
+    both += tilt * numbers[1]
+    return np.asarray(both[0] + both[1])
+
+
+def hermite_basis(x: FloatArray, left: FloatArray, right: FloatArray, with_slopes: bool = True) -> Basis:
+    """Hermite weights of values and slopes at both ends, and their derivatives; straight beyond `right`.
+
+    Returns
+    -------
+    (heights, tilts), (their derivatives)
+        Each (2, ...), left and right; the derivatives are empty where `with_slopes` is False.
+    """
     width = right - left
-    t = np.minimum((x - left) / width, 1.0)
-    beyond = np.maximum(x - right, 0.0)
+    t = (x - left) / width
+    beyond = None
+    if t.size and t.max() > 1.0:
+        beyond = np.maximum(x - right, 0.0)
+        t = np.minimum(t, 1.0)
     u = 1.0 - t
-    h0 = u * u * (1.0 + 2.0 * t)
-    g0 = width * t * u * u
-    g1 = -width * t * t * u + beyond
-    dh0 = -6.0 * t * u / width
-    dg0 = u * (1.0 - 3.0 * t)
-    dg1 = -t * (2.0 - 3.0 * t)
-    return ((h0, g0), (dh0, dg0)), ((1.0 - h0, g1), (-dh0, dg1))
+    heights, tilts = np.empty((2, *t.shape)), np.empty((2, *t.shape))
+    tu = t * u
+    heights[0] = u * u * (1.0 + 2.0 * t)
+    heights[1] = 1.0 - heights[0]
+    steep = width * tu
+    tilts[0] = steep * u
+    tilts[1] = -steep * t
+    if beyond is not None:
+        tilts[1] += beyond
+    if not with_slopes:
+        return (heights, tilts), (np.empty(0), np.empty(0))
+    height_slopes, tilt_slopes = np.empty_like(heights), np.empty_like(tilts)
+    height_slopes[1] = 6.0 * tu / width
+    height_slopes[0] = -height_slopes[1]
+    tilt_slopes[0] = u * (1.0 - 3.0 * t)
+    tilt_slopes[1] = t * (3.0 * t - 2.0)
+    return (heights, tilts), (height_slopes, tilt_slopes)
 
 
 def hermite_rows(grid: LogGrid, slopes: FloatArray, points: FloatArray) -> FloatArray:
@@ -179,7 +244,7 @@ def hermite_rows(grid: LogGrid, slopes: FloatArray, points: FloatArray) -> Float
     points (...,) -> (..., n).
     """
     k = grid.cell(points)
-    ((h0, g0), _), ((h1, g1), _) = hermite_basis(points, grid.nodes[k], grid.nodes[k + 1])
+    ((h0, h1), (g0, g1)), _ = hermite_basis(points, grid.nodes[k], grid.nodes[k + 1], False)
     unit = np.eye(grid.size)
     return (
         h0[..., None] * unit[k]
