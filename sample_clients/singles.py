@@ -203,7 +203,7 @@ EARLY_RETIREE: Values = {
         ],
     },
     "Markets": markets(),
-    "Portfolios": portfolios((0, 20, 40, 60, 80, 100), fee=0.004),
+    "Portfolios": portfolios(fee=0.004),
     "Preferences": {"Risk aversion": 3},
     "Tax": {"Extra income tax rate": 0},
 }
