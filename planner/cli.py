@@ -550,9 +550,12 @@ def _progress(console: Console, verbose: bool) -> Iterator[Callable[[float, str]
             TextColumn("{task.percentage:>3.0f}%"),
             TimeRemainingColumn(compact=True),
         )
-        with Progress(*columns, console=console, transient=True) as bar:
+        # Drawn when told to: a thread that draws would keep work from a second core (see `beside`).
+        with Progress(*columns, console=console, transient=True, auto_refresh=False) as bar:
             task = bar.add_task("reading", total=1.0)
-            yield lambda share, what: bar.update(task, completed=share, description=escape(what))
+            yield lambda share, what: bar.update(
+                task, completed=share, description=escape(what), refresh=True
+            )
     else:
         yield lambda share, what: None
 

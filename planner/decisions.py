@@ -105,7 +105,7 @@ class _Search:
         self.given, self.settings = given, settings
         self.household = given.household
         self.problem = given.problem
-        self._value = given.yardstick.value_at_scale(1.0)
+        self._value = given.yardstick.value
 
     def worth(self, value: float) -> float:
         """Money today that makes the client as given as well off as a plan of this value."""
@@ -337,7 +337,7 @@ def _conversions(search: _Search) -> Iterator[DecisionCurve | str]:
         paths = simulate(allowed.problem, FixedConversion(allowed.policy, amount), allowed.scenarios)
         utilities[amount] = float(outcomes.path_utilities(allowed.problem, paths).mean())
     optimal = float(allowed.yardstick.utilities.mean())
-    value = allowed.yardstick.value_at_scale(1.0)
+    value = allowed.yardstick.value
     points = [base]
     for amount in amounts[1:]:
         level = _level(allowed, value + utilities[amount] - optimal)

@@ -12,14 +12,18 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq
 
 from planner.piecewise import FloatArray
 from planner.preferences import SpendingUtility
-from planner.problem import IntArray, Problem
+from planner.problem import IntArray, Problem, over_accounts
 from planner.simulation import Paths
 
 BoolArray = NDArray[np.bool_]
+ValueAtScale = Callable[[FloatArray], FloatArray]
+
+SECTIONS, SECTIONINGS = 128, 3
+"""The wealth cost's bracket is cut into 128 parts three times: many values at once cost little more
+than one."""
 
 HALF_CENT = 0.005
 """Spending is short where it is less than this below what is needed."""
@@ -171,13 +175,13 @@ def need_normaliser(problem: Problem) -> float:
     return float(following[0])
 
 
-def wealth_cost(value_at_scale: Callable[[float], float], difference: float, wealth: float) -> float:
+def wealth_cost(value_at_scale: ValueAtScale, difference: float, wealth: float) -> float:
     """D that solves V_0((1 - D / W0) x) = V_0(x) + difference, in money.
 
     Parameters
     ----------
     value_at_scale : callable
-        s -> V_0(s x), the optimum's value with all accounts multiplied by s; increasing.
+        s -> V_0(s x), the optimum's value with all accounts multiplied by each s (n,); increasing.
     difference : float
         L_rule - L_optimum on the same scenarios, or minus a gap.
     wealth : float
@@ -191,15 +195,24 @@ def wealth_cost(value_at_scale: Callable[[float], float], difference: float, wea
     """
     if difference == 0 or wealth <= 0:
         return 0.0
-    target = value_at_scale(1.0) + difference
     low, high = (0.0, 1.0) if difference < 0 else (1.0, 2.0)
-    if value_at_scale(low) >= target:
-        return (1 - low) * wealth
-    if value_at_scale(high) <= target:
-        return (1 - high) * wealth
-    # 1e-12 of wealth is below a cent for any client; V_0 is steep near 0, which bisection steps bear.
-    scale = brentq(lambda s: value_at_scale(s) - target, low, high, xtol=1e-12, rtol=1e-12)
-    return (1 - float(scale)) * wealth
+    target = None
+    for _ in range(SECTIONINGS):
+        scales = np.linspace(low, high, SECTIONS + 1)
+        values = value_at_scale(scales)
+        if target is None:
+            target = float(values[-1] if difference < 0 else values[0]) + difference
+            if values[0] >= target:
+                return (1 - low) * wealth
+            if values[-1] <= target:
+                return (1 - high) * wealth
+        after = int(np.argmax(values >= target))
+        low, high = float(scales[after - 1]), float(scales[after])
+        below, above = float(values[after - 1]), float(values[after])
+    # V_0 is steep near 0, but a straight line over a two-millionth of it.
+    assert target is not None
+    scale = low + (high - low) * (target - below) / (above - below)
+    return (1 - scale) * wealth
 
 
 BILLS, TOO_LITTLE_EARLY, TOO_LITTLE_LATE, LEAVES_LESS = (
@@ -250,7 +263,8 @@ def main_loss(problem: Problem, best: Paths, other: Paths, early_years: int = 10
 def need_on_paths(problem: Problem, paths: Paths) -> FloatArray:
     """Need scale n of each path and year, (n_paths, n_years); 0 where nobody is alive."""
     with_nobody = np.column_stack([problem.need, np.zeros(problem.n_years)])
-    return np.take_along_axis(with_nobody.T, paths.status.astype(np.int64), axis=0)
+    years = zip(with_nobody, paths.status.T, strict=True)  # years are rows in memory
+    return np.stack([need.take(status) for need, status in years]).T
 
 
 def amount_short(spending: FloatArray, essential: FloatArray, alive: BoolArray) -> FloatArray:
@@ -307,8 +321,8 @@ def percentiles(values: FloatArray, levels: Sequence[float] = LEVELS) -> Percent
     if n == 0:
         return Percentiles(tuple(levels), nothing, nothing.copy(), np.array(0))
     spread = np.sqrt(wanted * (1 - wanted) / n)
-    around = np.concatenate([wanted, np.maximum(wanted - spread, 0.0), np.minimum(wanted + spread, 1.0)])
-    middle, low, high = np.quantile(values, around).reshape(3, -1)
+    around = np.stack([wanted, np.maximum(wanted - spread, 0.0), np.minimum(wanted + spread, 1.0)])
+    middle, low, high = np.interp(around * (n - 1), np.arange(n), np.sort(values))
     return Percentiles(tuple(levels), middle, (high - low) / 2, np.array(n))
 
 
@@ -355,7 +369,7 @@ def measure(problem: Problem, paths: Paths, levels: Sequence[float] = LEVELS) ->
     """All measures of one strategy's paths."""
     utility = mean_estimate(path_utilities(problem, paths))
     need = need_on_paths(problem, paths)
-    balance = paths.balances[:, :-1].sum(axis=2)
+    balance = over_accounts(paths.balances[:, :-1])
     short = amount_short(paths.spending, need * problem.utility.essential, paths.alive)
     tax_total = paths.tax.sum(axis=1)
     return Outcomes(

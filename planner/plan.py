@@ -9,11 +9,14 @@ from __future__ import annotations
 import difflib
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
+from typing import Any
 
 import numpy as np
 
 from planner import __version__, outcomes
 from planner.banded import KeepWithinBand
+from planner.beside import shared
 from planner.diagnostics import Diagnostic, InputError
 from planner.household import Household
 from planner.instructions import Choice, FirstYear, first_year, lifelong_income, this_year
@@ -21,7 +24,7 @@ from planner.mortality import life_expectancy
 from planner.optimum.policy import OptimalPolicy
 from planner.optimum.recursion import SolverSettings, solve
 from planner.plan_record import Plan, Sources, StrategyResult, SurvivorView, WhatIfResult
-from planner.problem import Policy, Problem
+from planner.problem import Policy, Problem, over_accounts
 from planner.problem_building import Builder, build_problem, life_table_of, tax_rules_of
 from planner.projection import (
     NO_CHANGE_TOLERANCE,
@@ -112,10 +115,7 @@ def solve_household(
     scenarios = draw_scenarios(problem, settings.n_paths, np.random.default_rng(settings.seed))
     paths = simulate(problem, policy, scenarios)
 
-    def value_at_scale(scale: float) -> float:
-        return float(policy.value(scale * problem.opening[None, :], 0, 0)[0])
-
-    yardstick = Yardstick(outcomes.path_utilities(problem, paths), value_at_scale)
+    yardstick = Yardstick(outcomes.path_utilities(problem, paths), policy.value_at_scale(problem.opening))
     late = late_years(problem, policy, paths, settings.seed) if settings.late_years else None
     return Solved(household, problem, policy, scenarios, paths, late, yardstick)
 
@@ -130,15 +130,30 @@ def compare_strategies(
     InputError
         Code ``rule-unknown``: a key in the settings names no rule.
     """
-    problem, policy = solved.problem, solved.policy
-    optimum = strategy_result(problem, policy, PLAN_KEY, solved.paths, solved.late, solved.yardstick)
-    results = [optimum]
+    return _in_turn(_strategy_jobs(solved, settings), progress)
+
+
+Job = Callable[[], StrategyResult]
+
+
+def _strategy_jobs(solved: Solved, settings: PlanSettings) -> list[Job]:
+    measured = (solved.problem, solved.policy, PLAN_KEY, solved.paths, solved.late, solved.yardstick)
     rules = chosen_rules(solved, settings)
-    for number, rule in enumerate(rules):
-        results.append(_simulated(solved, rule, rule.key, settings))
-        if progress is not None:
-            progress((number + 1) / len(rules))
-    return tuple(results)
+    return [
+        partial(strategy_result, *measured),
+        *(partial(_simulated, solved, rule, rule.key, settings) for rule in rules),
+    ]
+
+
+def _banded_job(solved: Solved, settings: PlanSettings) -> Job:
+    banded = KeepWithinBand(solved.policy, NO_CHANGE_TOLERANCE)
+    return partial(_simulated, solved, banded, banded.key, settings)
+
+
+def _in_turn(jobs: Sequence[Job], progress: Callable[[float], None] | None) -> tuple[StrategyResult, ...]:
+    report = progress or (lambda share: None)
+    with shared(jobs) as work:
+        return tuple(work.results(lambda number: report(number / len(jobs))))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -161,11 +176,10 @@ def strategies_in(
     solved: Solved, settings: PlanSettings, progress: Callable[[float], None] | None = None
 ) -> tuple[StrategyResult, ...]:
     """`compare_strategies`, with the band of no change after the optimum where all rules are asked for."""
-    strategies = compare_strategies(solved, settings, progress)
-    if settings.rules is not None:
-        return strategies
-    banded = KeepWithinBand(solved.policy, NO_CHANGE_TOLERANCE)
-    return (strategies[0], _simulated(solved, banded, banded.key, settings), *strategies[1:])
+    jobs = _strategy_jobs(solved, settings)
+    if settings.rules is None:
+        jobs.insert(1, _banded_job(solved, settings))
+    return _in_turn(jobs, progress)
 
 
 def _simulated(solved: Solved, policy: Policy, key: str, settings: PlanSettings) -> StrategyResult:
@@ -248,36 +262,42 @@ def make_plan(
     report = progress or (lambda share, what: None)
     household = read.household
     what_ifs = (*(_what_if_households(read) if settings.what_ifs else ()), *also)
-    # Measured on a couple with three accounts: a what-if is about a sixth of the plan without any.
-    end_base = 6 / (7 + len(what_ifs)) if what_ifs else 1.0
+    end_base = 10 / (11 + len(what_ifs)) if what_ifs else 1.0  # measured: a what-if is about a tenth
 
-    report(0.0, "finding the best plan")
-    solved = solve_household(
-        household, settings, progress=lambda s: report(0.6 * end_base * s, "finding the best plan")
+    # What-ifs need nothing of the plan and start on a second core at once; what follows the solution is
+    # shared with it too.
+    with shared(_what_if_jobs(household, what_ifs, settings)) as changed:
+        report(0.0, "finding the best plan")
+        solved = solve_household(
+            household, settings, progress=lambda s: report(0.5 * end_base * s, "finding the best plan")
+        )
+        problem, policy, paths = solved.problem, solved.policy, solved.paths
+        bound = partial(proof, problem, policy, settings.n_proof_paths, settings.seed)
+        jobs: list[Callable[[], Any]] = [bound, _banded_job(solved, settings)]
+        jobs += _strategy_jobs(solved, settings)
+        with shared(jobs) as rest:
+            facts = first_year(household)
+            now = first_choice(solved)
+            instructions = this_year(household, problem, facts, now)
+            middle = next_opening(problem, paths)
+            plan_year = household.plan_date.year
+            rows = schedule(problem, paths, solved.late, plan_year)
+            proved, banded, *others = rest.results(
+                lambda number: report(end_base * (0.5 + 0.5 * number / len(jobs)), "testing rules of thumb")
+            )
+        strategies = (*others, banded)
+        late_year = _late_year(problem)
+        names = ("as given", *(name for name, _ in what_ifs))
+        given, *changes = changed.results(
+            lambda number: report(
+                end_base + (1 - end_base) * number / len(names), f"what if: {names[number]}"
+            )
+        ) or [strategies[0]]
+    results = tuple(
+        _what_if_result(name, strategies[0], given, other, late_year)
+        for (name, _), other in zip(what_ifs, changes, strict=True)
     )
-    problem, policy, paths = solved.problem, solved.policy, solved.paths
-    strategies = compare_strategies(
-        solved, settings, lambda s: report(end_base * (0.6 + 0.35 * s), "testing rules of thumb")
-    )
-    banded = KeepWithinBand(policy, NO_CHANGE_TOLERANCE)
-    strategies += (_simulated(solved, banded, banded.key, settings),)
-
-    facts = first_year(household)
-    now = first_choice(solved)
-    instructions = this_year(household, problem, facts, now)
-    middle = next_opening(problem, paths)
-    plan_year = household.plan_date.year
     rules = tax_rules_of(household)
-    late_year = _late_year(problem)
-
-    results = _what_ifs(
-        household,
-        what_ifs,
-        strategies[0],
-        late_year,
-        settings,
-        lambda share, what: report(end_base + (1 - end_base) * share, what),
-    )
     fees = _fees(household)
     report(1.0, "done")
     return Plan(
@@ -288,8 +308,8 @@ def make_plan(
         this_year=instructions,
         level_spending=strategies[0].level_spending,
         value_share_simulated=_simulated_share(solved),
-        proof=proof(problem, policy, settings.n_proof_paths, settings.seed),
-        schedule=schedule(problem, paths, solved.late, plan_year),
+        proof=proved,
+        schedule=rows,
         lookup=lookup(problem, policy, middle),
         band=no_change_band(problem, policy, middle),
         strategies=strategies,
@@ -333,7 +353,7 @@ def _simulated_share(solved: Solved) -> float:
     problem, policy = solved.problem, solved.policy
     weight = float(policy.weights[0, 0])
     simulated = float(problem.utility.inverse(solved.yardstick.utilities.mean() / weight))
-    recursion = float(problem.utility.inverse(solved.yardstick.value_at_scale(1.0) / weight))
+    recursion = float(problem.utility.inverse(solved.yardstick.value / weight))
     return simulated / recursion
 
 
@@ -391,37 +411,34 @@ def _what_if_households(read: ReadWorkbook) -> Sequence[tuple[str, Household]]:
     return (*stresses(read.household), *own)
 
 
-def _what_ifs(
-    household: Household,
-    what_ifs: Sequence[tuple[str, Household]],
-    optimum: StrategyResult,
-    late_year: int,
-    settings: PlanSettings,
-    report: Progress,
-) -> tuple[WhatIfResult, ...]:
-    """Results of changed households, comparable with the plan's own.
+def _what_if_jobs(
+    household: Household, what_ifs: Sequence[tuple[str, Household]], settings: PlanSettings
+) -> list[Job]:
+    """Jobs for the household as given and for each what-if; none without what-ifs.
 
     Household and changed household are both solved on the coarser grids and meet the same draws;
     the difference between the two is added to the plan's own figures. The errors of grids and
     draws are nearly the same on both sides and drop out.
     """
     if not what_ifs:
-        return ()
-    coarse = replace(settings, solver=settings.what_if_solver, n_paths=settings.n_what_if_paths)
-    report(0.0, "what if: as given")
-    given = _optimum_alone(household, coarse)
-    results = []
-    for number, (name, changed) in enumerate(what_ifs):
-        report((1 + number) / (1 + len(what_ifs)), f"what if: {name}")
+        return []
+    coarse = replace(
+        settings, solver=settings.what_if_solver, n_paths=settings.n_what_if_paths, late_years=False
+    )
+
+    def changed(name: str, other: Household) -> StrategyResult:
         try:
-            other = _optimum_alone(changed, coarse)
+            return _optimum_alone(other, coarse)
         except InputError as error:
             raise InputError(
                 replace(problem, message=f"with the what-if {name!r}: {problem.message}")
                 for problem in error.diagnostics
             ) from None
-        results.append(_what_if_result(name, optimum, given, other, late_year))
-    return tuple(results)
+
+    return [
+        partial(_optimum_alone, household, coarse),
+        *(partial(changed, name, other) for name, other in what_ifs),
+    ]
 
 
 def _optimum_alone(household: Household, settings: PlanSettings) -> StrategyResult:
@@ -471,7 +488,7 @@ def yearly_costs(household: Household, portfolio: int) -> tuple[tuple[str, float
 
 def _plan_costs(problem: Problem, paths: Paths, fees: np.ndarray) -> float:
     """Mean over futures of all fees: on what stays invested after each year's withdrawals."""
-    invested = np.maximum(paths.balances[:, :-1].sum(axis=2) - paths.withdrawal.sum(axis=2), 0.0)
+    invested = np.maximum(over_accounts(paths.balances[:, :-1]) - over_accounts(paths.withdrawal), 0.0)
     return float((fees[paths.portfolio] * invested * paths.alive).sum(axis=1).mean())
 
 

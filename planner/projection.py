@@ -14,7 +14,7 @@ from planner import outcomes
 from planner.cashflow import advance
 from planner.piecewise import FloatArray
 from planner.plan_record import ExampleFuture, LookupRow, NoChangeBand, Range, ScheduleRow, StrategyResult
-from planner.problem import TAX_DEFERRED, IntArray, Policy, Problem, State
+from planner.problem import TAX_DEFERRED, IntArray, Policy, Problem, State, over_accounts
 from planner.simulation import Paths, Scenarios, draw_scenarios, simulate
 
 ENOUGH_PATHS = 200
@@ -109,17 +109,27 @@ class YearlyRanges:
     balance: FloatArray
 
 
-def yearly_ranges(paths: Paths, late: Paths | None) -> YearlyRanges:
-    """Percentiles over paths with someone alive; years with few of them are taken from `late`."""
+def yearly_ranges(
+    paths: Paths, late: Paths | None, measured: outcomes.Outcomes | None = None
+) -> YearlyRanges:
+    """Percentiles over paths with someone alive; years with few of them are taken from `late`.
 
-    def of(values: Callable[[Paths], FloatArray]) -> FloatArray:
-        result = outcomes.yearly_percentiles(values(paths), paths.alive).values
+    `measured` are the paths' outcomes where they are known.
+    """
+    few = paths.alive.sum(axis=0) < ENOUGH_PATHS
+
+    def of(values: Callable[[Paths], FloatArray], known: outcomes.Percentiles | None) -> FloatArray:
+        result = (known or outcomes.yearly_percentiles(values(paths), paths.alive)).values
         if late is not None:
-            few = paths.alive.sum(axis=0) < ENOUGH_PATHS
-            result[:, few] = outcomes.yearly_percentiles(values(late), late.alive).values[:, few]
+            result = result.copy()
+            late_values, late_alive = values(late)[:, few], late.alive[:, few]
+            result[:, few] = outcomes.yearly_percentiles(late_values, late_alive).values
         return np.asarray(result)
 
-    return YearlyRanges(of(lambda p: p.spending), of(lambda p: p.balances[:, :-1].sum(axis=2)))
+    return YearlyRanges(
+        of(lambda p: p.spending, measured.spending if measured else None),
+        of(lambda p: over_accounts(p.balances[:, :-1]), measured.balance if measured else None),
+    )
 
 
 def schedule(problem: Problem, paths: Paths, late: Paths | None, first_year: int) -> tuple[ScheduleRow, ...]:
@@ -239,11 +249,16 @@ class Yardstick:
     utilities : ndarray of shape (n_paths,)
         Of the optimum, on the scenarios that every strategy meets.
     value_at_scale : callable
-        s -> V_0 with all accounts multiplied by s.
+        Scales s (n,) -> V_0 with all accounts multiplied by each.
     """
 
     utilities: FloatArray
-    value_at_scale: Callable[[float], float]
+    value_at_scale: outcomes.ValueAtScale
+
+    @property
+    def value(self) -> float:
+        """V_0 at the opening balances."""
+        return float(self.value_at_scale(np.ones(1))[0])
 
 
 def strategy_result(
@@ -255,7 +270,7 @@ def strategy_result(
     of the cost: ``D(L +- e)`` are compared.
     """
     measured = outcomes.measure(problem, paths)
-    ranges = yearly_ranges(paths, late)
+    ranges = yearly_ranges(paths, late, measured)
     difference = outcomes.utility_difference(outcomes.path_utilities(problem, paths), yardstick.utilities)
 
     def cost(shift: float) -> float:

@@ -27,9 +27,7 @@ def proof(problem: Problem, policy: OptimalPolicy, n_paths: int, seed: int) -> P
     if problem.wealth <= 0:
         return None
     gap = prove(problem, policy, n_paths, np.random.default_rng([seed, 1]))
-    money = wealth_cost(
-        lambda scale: float(policy.value(scale * problem.opening[None, :])[0]), -gap.mean, problem.wealth
-    )
+    money = wealth_cost(policy.value_at_scale(problem.opening), -gap.mean, problem.wealth)
     share = money / problem.wealth
     unit = share / gap.mean if gap.mean > 0 else 0.0
     terms = zip(TERMS, gap.terms.mean(axis=0), strict=True)

@@ -17,6 +17,7 @@ from planner.piecewise import FloatArray
 from planner.problem import IntArray, Policy, Problem, State
 
 SmallIntArray = NDArray[np.int16]
+BoolArray = NDArray[np.bool_]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -70,12 +71,13 @@ class Scenarios:
         """Number of years."""
         return self.status.shape[1] - 1
 
-    def returns(self, problem: Problem, t: int, path: IntArray, portfolio: IntArray) -> FloatArray:
+    def returns(self, problem: Problem, t: int, path: IntArray | slice, portfolio: IntArray) -> FloatArray:
         """Gross real return of year t on the given paths for the portfolio each holds; (len(path),)."""
         if self.node is not None:
             return problem.gross[portfolio, self.node[path, t]]
         if self.gross is not None:
-            return self.gross[path, t, portfolio]
+            year = self.gross[path, t]
+            return year[np.arange(year.shape[0]), portfolio]
         assert self.normal is not None
         if problem.returns is None:
             raise ValueError("this problem has no continuous law of returns; draw with law='nodes'")
@@ -133,7 +135,10 @@ def draw_scenarios(
     law: Literal["continuous", "nodes"] = "continuous",
     stratified: bool = True,
 ) -> Scenarios:
-    """Draw lives and returns.
+    """Draw lives and returns; paths are sorted by length of life, the longest first.
+
+    Sorting lives alone leaves the law of the paths as it is: returns are independent of lives, and
+    exchangeable between paths. Who lives is then always the first so many paths.
 
     Parameters
     ----------
@@ -143,6 +148,8 @@ def draw_scenarios(
         See `uniform_draws`.
     """
     status = draw_statuses(problem, uniform_draws(generator, n_paths, problem.n_years, stratified))
+    lengths = (status < problem.n_statuses).sum(axis=1)
+    status = status.T[:, np.argsort(-lengths, kind="stable")].T
     uniform = uniform_draws(generator, n_paths, problem.n_years, stratified)
     if law == "continuous":
         return Scenarios(status, normal=np.asarray(ndtri(uniform)))
@@ -220,7 +227,10 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
     death_year = np.zeros(n_paths, dtype=np.int64)
     status = np.ascontiguousarray(scenarios.status.T)
 
-    path = np.arange(n_paths)  # those with someone alive
+    # Those with someone alive: the first so many where lives are sorted, which spares copies.
+    lengths = (status < problem.n_statuses).sum(axis=0)
+    is_sorted = bool((lengths[1:] <= lengths[:-1]).all())
+    path: IntArray | slice = slice(0, n_paths) if is_sorted else np.arange(n_paths)
     balances[0] = problem.opening
     state = State(
         balances=np.tile(problem.opening, (n_paths, 1)),
@@ -231,7 +241,7 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
         memory=np.zeros((n_paths, policy.n_memory)),
     )
     for t in range(n_years):
-        if path.size == 0:
+        if state.status.size == 0:
             break
         decision = policy.decide(problem, t, state)
         gross = scenarios.returns(problem, t, path, decision.portfolio)
@@ -241,19 +251,27 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
         withdrawal[t, path], portfolio[t, path] = year.withdrawal, year.portfolio
 
         next_status = status[t + 1, path]
-        lives = next_status < problem.n_statuses
-        last = path[~lives]
-        estate[last], death_year[last] = estate_money(problem, year.closing[~lives]), t
-        path = path[lives]
+        living = next_status < problem.n_statuses
+        lives: BoolArray | slice = living
+        dies: BoolArray | slice = ~living
+        last: IntArray | slice
+        if isinstance(path, slice):
+            n_living = int(living.sum())
+            path = lives = slice(0, n_living)
+            last = dies = slice(n_living, living.size)
+        else:
+            path, last = path[living], path[~living]
+        estate[last], death_year[last] = estate_money(problem, year.closing[dies]), t
         balances[t + 1, path] = year.closing[lives]
+        next_status = next_status[lives]
         inflation = (
-            np.full(path.size, problem.inflation)
+            np.full(next_status.size, problem.inflation)
             if scenarios.inflation is None
             else scenarios.inflation[path, t]
         )
         state = State(
             balances=year.closing[lives],
-            status=next_status[lives].astype(np.int64),
+            status=next_status.astype(np.int64),
             price_level=state.price_level[lives] * (1 + inflation),
             last_inflation=inflation,
             last_return=gross[lives] * (1 + inflation) - 1,

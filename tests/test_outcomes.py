@@ -95,8 +95,8 @@ def test_paired_difference_is_far_more_exact_than_the_difference_of_means() -> N
 def test_wealth_cost_is_exact_where_value_is_logarithmic() -> None:
     """V_0(s) = ln s: a loss of ln(4/5) costs a fifth of wealth; a gain of ln(1.1) a negative tenth."""
 
-    def value(scale: float) -> float:
-        return float(np.log(max(scale, 1e-300)))
+    def value(scale: np.ndarray) -> np.ndarray:
+        return np.log(np.maximum(scale, 1e-300))
 
     assert wealth_cost(value, 0.0, 500_000.0) == 0.0
     assert wealth_cost(value, float(np.log(0.8)), 500_000.0) == pytest.approx(100_000.0, abs=0.01)
@@ -108,10 +108,10 @@ def test_wealth_cost_is_exact_where_value_is_logarithmic() -> None:
 def test_wealth_cost_recovers_a_known_cost(cost: float, gamma: float, pension: float) -> None:
     """V_0(s) = U(pension + s), as steep near s = 0 as values get."""
 
-    def value(scale: float) -> float:
-        return float((pension + scale) ** (1 - gamma) / (1 - gamma))
+    def value(scale: np.ndarray) -> np.ndarray:
+        return np.asarray((pension + scale) ** (1 - gamma) / (1 - gamma))
 
-    difference = value(1 - cost) - value(1.0)
+    difference = float(value(np.float64(1 - cost)) - value(np.float64(1.0)))
     # A cent of 100,000; beyond it, the rounding of values of size U(pension) (relative 1e-16).
     slope = (pension + 1 - cost) ** -gamma
     tolerance = 0.01 + 1e5 * 1e-15 * abs(value(1 - cost)) / slope
@@ -125,7 +125,7 @@ def test_wealth_cost_is_all_of_it_where_no_savings_would_be_better() -> None:
 
 def test_wealth_cost_of_a_gain_that_no_wealth_gives_is_bounded() -> None:
     """Under a ceiling value is flat at the top: sampling error must not break the report."""
-    assert wealth_cost(lambda s: min(s, 1.0), 0.01, 300_000.0) == -300_000.0
+    assert wealth_cost(lambda s: np.minimum(s, 1.0), 0.01, 300_000.0) == -300_000.0
 
 
 def test_wealth_cost_without_wealth_is_nothing() -> None:
