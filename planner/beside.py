@@ -19,6 +19,8 @@ from typing import Generic, TypeVar
 
 T = TypeVar("T")
 
+_is_copy = False  # in this process: it makes no copies of its own
+
 MOST_JOBS = 255
 """A job's number is one byte in the pipe, which is read whole or not at all."""
 
@@ -83,6 +85,8 @@ class Shared(Generic[T]):
 
     def _work(self, answer: int, parent: int) -> None:
         """In the copy: take jobs, send the results of all, and end without cleaning up."""
+        global _is_copy
+        _is_copy = True
         try:
             signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C is the caller's business
             done: dict[int, T] = {}
@@ -128,4 +132,6 @@ def may_copy() -> bool:
     A fork copies only the thread that calls it: locks held by others would stay locked. Workers of a
     client list have a thread of their own, and so stay alone on their core.
     """
+    if _is_copy:
+        return False
     return sys.platform == "linux" and threading.active_count() == 1 and len(os.sched_getaffinity(0)) > 1

@@ -55,6 +55,11 @@ PLAN_KEY = "plan"
 """Key of the optimum among strategies."""
 
 
+COARSE_GRID = 0.6
+"""Of the default grids: a fifth of the time; on the samples value within 0.1 % and this year's spending
+within 0.6 % of the default's."""
+
+
 @dataclass(frozen=True, slots=True)
 class PlanSettings:
     """How a plan is computed.
@@ -68,8 +73,11 @@ class PlanSettings:
     n_proof_paths : int
         Paths on which the upper bound is estimated.
     seed : int
-    solver, what_if_solver : SolverSettings
-        Grids; what-ifs differ from the plan by what coarser grids say of both (see `_what_ifs`).
+    grid, what_if_grid : float
+        Nodes along each axis, as a multiple of the default grids' for the problem. What-ifs differ from
+        the plan by what coarser grids say of both (see `_what_if_jobs`).
+    solver, what_if_solver : SolverSettings or None
+        Grids to use instead.
     rules : tuple of str or None
         Keys of the rules to compare with; None = all.
     late_years : bool
@@ -86,7 +94,9 @@ class PlanSettings:
     n_proof_paths: int = 300
     seed: int = 20260101
     solver: SolverSettings | None = None
-    what_if_solver: SolverSettings = SolverSettings(12, 12, 8, 48)  # noqa: RUF009
+    what_if_solver: SolverSettings | None = None
+    grid: float = 1.0
+    what_if_grid: float = COARSE_GRID
     rules: tuple[str, ...] | None = None
     what_ifs: bool = True
     late_years: bool = True
@@ -111,7 +121,8 @@ def solve_household(
 ) -> Solved:
     """Solve a household's problem and simulate the optimum."""
     problem = build_problem(household)
-    policy = solve(problem, settings.solver, progress)
+    solver = settings.solver or SolverSettings.for_problem(problem).scaled(settings.grid)
+    policy = solve(problem, solver, progress)
     scenarios = draw_scenarios(problem, settings.n_paths, np.random.default_rng(settings.seed))
     paths = simulate(problem, policy, scenarios)
 
@@ -423,7 +434,11 @@ def _what_if_jobs(
     if not what_ifs:
         return []
     coarse = replace(
-        settings, solver=settings.what_if_solver, n_paths=settings.n_what_if_paths, late_years=False
+        settings,
+        solver=settings.what_if_solver,
+        grid=settings.what_if_grid,
+        n_paths=settings.n_what_if_paths,
+        late_years=False,
     )
 
     def changed(name: str, other: Household) -> StrategyResult:

@@ -4,12 +4,16 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from typing import TYPE_CHECKING, TypeVar
 
+from planner.beside import shared
 from planner.commands.answers import Answer, Block
 from planner.diagnostics import Diagnostic, InputError
-from planner.optimum.recursion import SolverSettings
-from planner.plan import Comparison, PlanSettings, Progress, compare, rule_key
+from planner.household import Household
+from planner.plan import COARSE_GRID, Comparison, PlanSettings, Progress, compare, rule_key
+from planner.plan_record import StrategyResult
+from planner.problem import Problem
 from planner.projection import later_ages
 from planner.reports import export_views, terminal_comparison, terminal_views
 from planner.reports.export import Json
@@ -25,9 +29,6 @@ Result = TypeVar("Result")
 
 QUICK_PATHS = 1_500
 """Futures for what-ifs, stresses and searches, where no other number is asked for."""
-
-QUICK_SOLVER = SolverSettings(10, 10, 7, 40)
-"""Their grids: a change is compared with the original on the same grid, so errors nearly drop out."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,7 +93,8 @@ def answer(
         that breaks a rule; a history that is not there.
     """
     settings = with_rules(settings, views.rules)
-    quick = replace(settings, solver=QUICK_SOLVER, n_paths=views.futures or QUICK_PATHS, late_years=False)
+    # A change is compared with the original on the same coarser grid, so errors nearly drop out.
+    quick = replace(settings, grid=COARSE_GRID, n_paths=views.futures or QUICK_PATHS, late_years=False)
     changes = _every(parse_change, views.what_ifs)
     warn(read.warnings)
     household = read.household
@@ -191,18 +193,20 @@ def _what_ifs(
     head: Json,
 ) -> Answer:
     quick = replace(quick, rules=quick.rules or ())
-    parts = 1 + len(scenarios)
+    names = ("as given", *(name for name, _, _ in scenarios))
+    clients = (read, *(other for _, _, other in scenarios))
 
-    def part(number: int, what: str) -> Progress:
-        return lambda share, step: progress((number + share) / parts, f"{what}: {step}")
+    def part(number: int) -> Progress:
+        return lambda share, step: progress((number + share) / len(names), f"{names[number]}: {step}")
 
-    before = compare(read.household, quick, part(0, "as given"))
-    later = later_ages(before.solved.problem)
+    jobs = [partial(_compared, client.household, quick, part(k)) for k, client in enumerate(clients)]
+    with shared(jobs) as work:
+        before, *afters = work.results()
+    later = later_ages(before.problem)
     blocks: list[Block] = []
     found: list[Json] = []
-    for number, (name, changes, other) in enumerate(scenarios):
+    for (name, changes, other), after in zip(scenarios, afters, strict=True):
         warn(other.warnings)
-        after = compare(other.household, quick, part(1 + number, name))
         there = _years_of(after, [age for age, _ in later])
         found.append(
             {
@@ -224,30 +228,44 @@ def _what_ifs(
     return Answer(data, tuple(blocks))
 
 
-def _years_of(made: Comparison, ages: Sequence[int]) -> list[tuple[int, int]]:
+@dataclass(frozen=True, slots=True, eq=False)
+class _Compared:
+    """What the tables show of a comparison; without the solution, it is quick to send."""
+
+    household: Household
+    problem: Problem
+    strategies: tuple[StrategyResult, ...]
+
+
+def _compared(household: Household, settings: PlanSettings, progress: Progress) -> _Compared:
+    made = compare(household, settings, progress)
+    return _Compared(household, made.solved.problem, made.strategies)
+
+
+def _years_of(made: _Compared, ages: Sequence[int]) -> list[tuple[int, int]]:
     """The same ages of the first person, with their years in another plan."""
-    own = made.solved.problem.ages[0]
+    own = made.problem.ages[0]
     return [(age, age - int(own[0])) for age in ages if own[0] <= age <= own[-1]]
 
 
 def _side_by_side(
-    before: Comparison,
-    after: Comparison,
+    before: _Compared,
+    after: _Compared,
     name: str,
     later: Sequence[tuple[int, int]],
     there: Sequence[tuple[int, int]],
 ) -> Block:
-    currency = before.solved.household.currency
+    currency = before.household.currency
     return lambda width, plain: terminal_comparison.side_by_side(
         before.strategies[0], after.strategies[0], currency, name, later, there
     )
 
 
-def _changed_client(after: Comparison, read: ReadWorkbook, later: Sequence[tuple[int, int]]) -> Block:
+def _changed_client(after: _Compared, read: ReadWorkbook, later: Sequence[tuple[int, int]]) -> Block:
     household = read.household
     whose = household.people[0].name if household.is_couple else ""
     return lambda width, plain: terminal_comparison.comparison(
-        after.strategies, household.currency, after.solved.problem.wealth, width, later, whose, plain
+        after.strategies, household.currency, after.problem.wealth, width, later, whose, plain
     )
 
 
@@ -269,8 +287,7 @@ def _tables(read: ReadWorkbook, views: Views, quick: PlanSettings, progress: Pro
     if views.decisions:
         from planner.decisions import decisions
 
-        # Some candidates differ by little: finer grids than for a single what-if.
-        curves, left_out = decisions(household, replace(quick, solver=quick.what_if_solver), progress)
+        curves, left_out = decisions(household, quick, progress)
         data["decisions"] = [export_views.decision_json(curve) for curve in curves]
         data["decisions_left_out"] = list(left_out)
         blocks.append(
