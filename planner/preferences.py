@@ -19,6 +19,7 @@ An estate b is worth :math:`v(b) = a^\gamma U(a b_0 + b)` (Lockwood 2018, Americ
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -77,16 +78,30 @@ class SpendingUtility:
         z = (np.asarray(m, dtype=np.float64) * self.essential) ** (-1 / self.risk_aversion)
         return np.asarray(self.essential * z)
 
+    @property
+    def steepest(self) -> float:
+        """Slope of the straight line below the floor: the largest that f has anywhere."""
+        return self.shortfall_weight * self._floor_slope
+
+    @property
+    def _floor_slope(self) -> float:
+        return float((self.floor / self.essential) ** (-self.risk_aversion) / self.essential)
+
+    def _scalar(self, x: float) -> float:
+        """U(x) of one amount; an array of one costs ten times as much."""
+        z, power = x / self.essential, 1 - self.risk_aversion
+        return math.log(z) if power == 0 else z**power / power
+
     # f -------------------------------------------------------------------------------------------
     def value(self, x: ArrayLike) -> FloatArray:
         """f(x), any real x; any shape."""
         x = np.asarray(x, dtype=np.float64)
         u = self.power(np.maximum(x, self.floor))
         below = np.minimum(x - self.floor, 0.0)
-        g = u + self.power_marginal(self.floor) * below
+        g = u + self._floor_slope * below
         if self.shortfall_weight == 1:
             return np.asarray(g)
-        return np.asarray(g + (self.shortfall_weight - 1) * np.minimum(g - self.power(self.essential), 0.0))
+        return np.asarray(g + (self.shortfall_weight - 1) * np.minimum(g - self._scalar(self.essential), 0.0))
 
     def marginal(self, x: ArrayLike) -> FloatArray:
         """f'(x), the right derivative at E and the left one at the floor; any shape."""
@@ -100,10 +115,10 @@ class SpendingUtility:
         For gamma > 1 every v of an average of utilities is below 0, where the inverse exists.
         """
         v = np.asarray(v, dtype=np.float64)
-        kappa, top = self.shortfall_weight, float(self.power(self.essential))
-        bottom = float(self.power(self.floor))
+        kappa, top = self.shortfall_weight, self._scalar(self.essential)
+        bottom = self._scalar(self.floor)
         u = np.where(v >= top, v, (v + (kappa - 1) * top) / kappa)
-        line = self.floor + (u - bottom) / float(self.power_marginal(self.floor))
+        line = self.floor + (u - bottom) / self._floor_slope
         return np.asarray(np.where(u >= bottom, self.power_inverse(np.maximum(u, bottom)), line))
 
     def inverse_marginal(self, m: ArrayLike) -> FloatArray:

@@ -218,8 +218,7 @@ class YearChoice:
         need = problem.need[self.t, self.h]
         kept = float(np.min(self.tax.x - self.tax.y))
         least = min(0.0, float(problem.income[self.t, self.h]) + min(kept, 0.0))
-        line = float(utility.marginal(np.array(0.5 * utility.floor)))
-        c = np.where(price > line, least, need * utility.inverse_marginal(price))
+        c = np.where(price > utility.steepest, least, need * utility.inverse_marginal(price))
         c = np.minimum(c, problem.ceiling * need)
         return self._felicity(c) - price * c
 

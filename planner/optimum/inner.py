@@ -72,9 +72,8 @@ class Felicity:
         """Spending c >= 0 that maximises n f(c/n) - price c, held to the ceiling."""
         price = np.maximum(price, 0.0)
         c = self.need * self.utility.inverse_marginal(price)
-        line = float(self.utility.marginal(np.array(self.utility.floor * 0.5)))
         # On the straight line below the floor nothing is spent at a price above its slope.
-        return self.at_most(np.where(price > line, 0.0, c))
+        return self.at_most(np.where(price > self.utility.steepest, 0.0, c))
 
     def at_most(self, c: FloatArray) -> FloatArray:
         """Spending c held to the ceiling."""
@@ -258,6 +257,8 @@ def _steepest(level: FloatArray, nodes: FloatArray) -> FloatArray:
 
 def _bracket(points: FloatArray, knots: FloatArray) -> IntArray:
     """Last knot at or below each point: (m, n3), (n2, n, n3) -> (n2, m, n3); -1 where none."""
+    if knots.shape[0] == knots.shape[2] == 1:
+        return (np.searchsorted(knots[0, :, 0], points[:, 0], side="right") - 1)[None, :, None]
     count = np.zeros((knots.shape[0], *points.shape), dtype=np.int64)
     for i in range(knots.shape[1]):
         count += points >= knots[:, i : i + 1]

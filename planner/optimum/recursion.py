@@ -39,10 +39,10 @@ class SolverSettings:
         Below wealth / `scale` nodes are about evenly spaced, above it in proportion.
     """
 
-    taxable: int = 18
-    tax_deferred: int = 24
-    tax_free: int = 11
-    cash: int = 56
+    taxable: int = 16
+    tax_deferred: int = 21
+    tax_free: int = 9
+    cash: int = 48
     top: float = 4.0
     scale: float = 50.0
 
@@ -52,7 +52,7 @@ class SolverSettings:
         _, deferred, free = problem.has_account
         if deferred and free:
             # One status costs a third of three: a single person can have the finer grid.
-            return cls() if problem.n_statuses > 1 else cls(22, 30, 14, scale=60.0)
+            return cls() if problem.n_statuses > 1 else cls(20, 27, 12, 50, scale=60.0)
         if deferred:
             return cls(taxable=28, tax_deferred=40, cash=90)
         if free:
@@ -208,13 +208,18 @@ def solve(
 def _slopes(choice: OuterChoice, along3: FloatArray, grids: tuple[LogGrid, LogGrid, LogGrid]) -> FloatArray:
     """Slopes of the level along the three accounts, (3, n1, n2, n3); tax-free at least cash."""
     level = choice.level.transpose(2, 0, 1)
-    free_slope = limited_slopes(np.tensordot(along3, level, axes=1), level, grids[2].nodes)
+    free_slope = limited_slopes(_across(along3, level), level, grids[2].nodes)
     cash = plausible_slopes(choice.cash_slope, choice.level, grids[0].nodes)
     cash = np.maximum(cash, TINY_SLOPE)
     turned = (1, 0, 2)
     level2, slope2 = choice.level.transpose(turned), choice.slope2.transpose(turned)
     slope2 = plausible_slopes(slope2, level2, grids[1].nodes).transpose(turned)
     return np.stack([cash, slope2, np.maximum(free_slope.transpose(1, 2, 0), cash)])
+
+
+def _across(matrix: FloatArray, values: FloatArray) -> FloatArray:
+    """Matrix times values along their first axis."""
+    return np.asarray((matrix @ values.reshape(values.shape[0], -1)).reshape(values.shape))
 
 
 def _continuation(
@@ -232,7 +237,7 @@ def _continuation(
     else:
         level = smooth.inverse(later / weight)
         slope2 = later2 / (weight * smooth.marginal(level))
-    slope1 = limited_slopes(np.tensordot(slopes[0], level, axes=1), level, grids[0].nodes)
+    slope1 = limited_slopes(_across(slopes[0], level), level, grids[0].nodes)
     at_zero = level[0].T  # (n3, n2): along tax-free where taxable is used up
     slope3 = limited_slopes(slopes[2] @ at_zero, at_zero, grids[2].nodes)
     first = (1, 0, 2)
