@@ -34,7 +34,7 @@ class Shared(Generic[T]):
         self._answers = -1  # the pipe of the copy's results
         self._copy = 0
         self._done: dict[int, T] = {}
-        if may_copy() and 1 < len(jobs) <= MOST_JOBS:
+        if may_copy() and 1 <= len(jobs) <= MOST_JOBS:
             self._start()
 
     def results(self, on_job: Callable[[int], None] = lambda number: None) -> list[T]:

@@ -10,7 +10,7 @@ import os
 import signal
 import sys
 from collections.abc import Callable, Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, TypeVar
 
@@ -569,7 +569,24 @@ def main() -> None:
     """
     for variable in ("OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
         os.environ.setdefault(variable, "1")
+    _keep_freed_memory()
     app()
+
+
+def _keep_freed_memory() -> None:
+    """Ask the GNU C library to keep the memory of freed arrays for the next ones.
+
+    By default it gives large ones back to the system and gets them again, cleared page by page
+    (measured: a tenth of the time of a plan). Elsewhere nothing is changed.
+    """
+    if sys.platform == "linux":
+        import ctypes
+
+        trim_threshold, mmap_threshold = -1, -3  # malloc.h
+        with suppress(OSError, AttributeError):
+            library = ctypes.CDLL(None)
+            library.mallopt(mmap_threshold, 32 << 20)
+            library.mallopt(trim_threshold, 512 << 20)
 
 
 if __name__ == "__main__":

@@ -125,13 +125,15 @@ class Outcomes:
 # Value ------------------------------------------------------------------------------------------
 
 
-def path_utilities(problem: Problem, paths: Paths) -> FloatArray:
+def path_utilities(problem: Problem, paths: Paths, need: FloatArray | None = None) -> FloatArray:
     r"""Discounted utility of each path, (n_paths,).
 
     :math:`\sum_{t \text{ alive}} \beta^t n_t f(c_t / n_t) + \beta^{\tau + 1} v(b)`, with tau the
-    last year that opens with someone alive and b the estate left at its end.
+    last year that opens with someone alive and b the estate left at its end; `need` is as
+    `need_on_paths` gives it, where it is known.
     """
-    need = need_on_paths(problem, paths)
+    if need is None:
+        need = need_on_paths(problem, paths)
     total = np.zeros(paths.n_paths)
     for t in range(paths.n_years):
         here = np.flatnonzero(paths.alive[:, t])
@@ -365,12 +367,30 @@ def exhausted_year(balances: FloatArray, alive: BoolArray) -> IntArray:
     return np.where(empty.any(axis=1), empty.argmax(axis=1), balances.shape[1])
 
 
-def measure(problem: Problem, paths: Paths, levels: Sequence[float] = LEVELS) -> Outcomes:
+@dataclass(frozen=True, slots=True, eq=False)
+class PathMeasures:
+    """What measures are made of: need scale and amount short (n_paths, n_years), utility (n_paths,)."""
+
+    need: FloatArray
+    short: FloatArray
+    utilities: FloatArray
+
+    @classmethod
+    def of(cls, problem: Problem, paths: Paths) -> PathMeasures:
+        """Measure every path."""
+        need = need_on_paths(problem, paths)
+        short = amount_short(paths.spending, need * problem.utility.essential, paths.alive)
+        return cls(need, short, path_utilities(problem, paths, need))
+
+
+def measure(
+    problem: Problem, paths: Paths, levels: Sequence[float] = LEVELS, by_path: PathMeasures | None = None
+) -> Outcomes:
     """All measures of one strategy's paths."""
-    utility = mean_estimate(path_utilities(problem, paths))
-    need = need_on_paths(problem, paths)
+    by_path = by_path or PathMeasures.of(problem, paths)
+    need, short = by_path.need, by_path.short
+    utility = mean_estimate(by_path.utilities)
     balance = over_accounts(paths.balances[:, :-1])
-    short = amount_short(paths.spending, need * problem.utility.essential, paths.alive)
     tax_total = paths.tax.sum(axis=1)
     return Outcomes(
         utility=utility,

@@ -10,7 +10,6 @@ import difflib
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from functools import partial
-from typing import Any
 
 import numpy as np
 
@@ -120,9 +119,21 @@ def solve_household(
     household: Household, settings: PlanSettings, progress: Callable[[float], None] | None = None
 ) -> Solved:
     """Solve a household's problem and simulate the optimum."""
+    problem, policy = _solve(household, settings, progress)
+    return _with_paths(household, problem, policy, settings)
+
+
+def _solve(
+    household: Household, settings: PlanSettings, progress: Callable[[float], None] | None
+) -> tuple[Problem, OptimalPolicy]:
     problem = build_problem(household)
     solver = settings.solver or SolverSettings.for_problem(problem).scaled(settings.grid)
-    policy = solve(problem, solver, progress)
+    return problem, solve(problem, solver, progress)
+
+
+def _with_paths(
+    household: Household, problem: Problem, policy: OptimalPolicy, settings: PlanSettings
+) -> Solved:
     scenarios = draw_scenarios(problem, settings.n_paths, np.random.default_rng(settings.seed))
     paths = simulate(problem, policy, scenarios)
 
@@ -162,6 +173,8 @@ def _banded_job(solved: Solved, settings: PlanSettings) -> Job:
 
 
 def _in_turn(jobs: Sequence[Job], progress: Callable[[float], None] | None) -> tuple[StrategyResult, ...]:
+    if len(jobs) == 1:
+        return (jobs[0](),)
     report = progress or (lambda share: None)
     with shared(jobs) as work:
         return tuple(work.results(lambda number: report(number / len(jobs))))
@@ -279,13 +292,15 @@ def make_plan(
     # shared with it too.
     with shared(_what_if_jobs(household, what_ifs, settings)) as changed:
         report(0.0, "finding the best plan")
-        solved = solve_household(
-            household, settings, progress=lambda s: report(0.5 * end_base * s, "finding the best plan")
+        problem, policy = _solve(
+            household, settings, lambda s: report(0.5 * end_base * s, "finding the best plan")
         )
-        problem, policy, paths = solved.problem, solved.policy, solved.paths
         bound = partial(proof, problem, policy, settings.n_proof_paths, settings.seed)
-        jobs: list[Callable[[], Any]] = [bound, _banded_job(solved, settings)]
-        jobs += _strategy_jobs(solved, settings)
+        with shared([bound]) as proving:
+            solved = _with_paths(household, problem, policy, settings)
+            (proved,) = proving.results()
+        paths = solved.paths
+        jobs = [_banded_job(solved, settings), *_strategy_jobs(solved, settings)]
         with shared(jobs) as rest:
             facts = first_year(household)
             now = first_choice(solved)
@@ -293,7 +308,7 @@ def make_plan(
             middle = next_opening(problem, paths)
             plan_year = household.plan_date.year
             rows = schedule(problem, paths, solved.late, plan_year)
-            proved, banded, *others = rest.results(
+            banded, *others = rest.results(
                 lambda number: report(end_base * (0.5 + 0.5 * number / len(jobs)), "testing rules of thumb")
             )
         strategies = (*others, banded)

@@ -269,19 +269,18 @@ def strategy_result(
     The standard error of the cost comes from the paired differences of utility, through the slope
     of the cost: ``D(L +- e)`` are compared.
     """
-    measured = outcomes.measure(problem, paths)
+    by_path = outcomes.PathMeasures.of(problem, paths)
+    measured = outcomes.measure(problem, paths, by_path=by_path)
     ranges = yearly_ranges(paths, late, measured)
-    difference = outcomes.utility_difference(outcomes.path_utilities(problem, paths), yardstick.utilities)
+    difference = outcomes.utility_difference(by_path.utilities, yardstick.utilities)
 
     def cost(shift: float) -> float:
         return outcomes.wealth_cost(yardstick.value_at_scale, difference.value + shift, problem.wealth)
 
     error = difference.standard_error
-    short = outcomes.amount_short(
-        paths.spending, outcomes.need_on_paths(problem, paths) * problem.utility.essential, paths.alive
-    )
-    below = (short > 0).any(axis=1)
-    first_age = problem.ages[0, (short > 0).argmax(axis=1)[below]]
+    is_short = by_path.short > 0
+    below = is_short.any(axis=1)
+    first_age = problem.ages[0, is_short.argmax(axis=1)[below]]
     return StrategyResult(
         key=key,
         name=policy.name,
