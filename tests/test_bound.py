@@ -337,12 +337,12 @@ def one_account(step: float) -> Problem:
     )
 
 
-@pytest.mark.parametrize(("step", "largest"), [(0.2, 8e-3), (0.025, 1.5e-3)])
+@pytest.mark.parametrize(("step", "largest"), [(0.2, 2e-3), (0.025, 2e-4)])
 def test_one_account_of_forty_six_years(step: float, largest: float) -> None:
     """Plan and bound in level spending. The trial of the model document: 43,616 and 43,624.
 
-    The gap is that of a list of portfolios: the bound lets money be split between them. 0.58 % seen in
-    steps of 20 points, 0.09 % in steps of 2.5; nearly all of it is "taxable held".
+    The gap is that of a list of portfolios: the bound lets money be split between them. 0.12 % of wealth
+    seen in steps of 20 points, 0.013 % in steps of 2.5; "taxable held", and "spending" by tilted prices.
     """
     problem = one_account(step)
     policy = solve(problem)
@@ -354,7 +354,7 @@ def test_one_account_of_forty_six_years(step: float, largest: float) -> None:
     assert plan == pytest.approx(43_616.0, rel=5e-4)  # life table and floor of the trial are not on record
     assert 0.0 <= bound / plan - 1 <= largest
     shares = dict(zip(TERMS, gap.terms.mean(axis=0) / gap.mean, strict=True))
-    assert shares["taxable held"] > 0.9
+    assert shares["taxable held"] + shares["spending"] > 0.99
 
 
 class Spends:

@@ -23,7 +23,8 @@ The conditions hold by construction, whatever the prices read off the solved val
 price is that reading times a factor for its account, known a year ahead and chosen such that the
 conditional expectation (an exact sum over return nodes and statuses) meets its limit. While an
 account holds money the factor is a martingale correction, so that money held is priced at what it will
-be worth. The price of cash may be anything up to its reading times its factor; what is not used of it
+be worth. Before that, next year's readings may be tilted by return node (`_Proof._tilt`). The price
+of cash may be anything up to its reading times its factor; what is not used of it
 costs (limit - l) x1, nothing in a year that opens without taxable.
 """
 
@@ -44,6 +45,9 @@ EMPTY = 1e-6  # share of wealth below which an account counts as empty
 LITTLE = 0.1  # essential years below which tax-free money is priced as read, at the cost of a slack
 STEADY = 1.1  # most by which tax-deferred's factor exceeds cash's while the minimum distribution binds
 PILOT_PATHS = 64
+_TILTS = np.array([0.001, 0.002, 0.004, 0.007, 0.011, 0.016, 0.023, 0.032, 0.045, 0.06, 0.08])
+TILTS = np.concatenate([-_TILTS[::-1], [0.0], _TILTS])  # of next year's prices, per standard deviation
+STRAYING = 25.0  # years over which a tilt's distance from marginal utility is felt; tried: 10 to 100
 TERMS = ("spending", "taxable held", "tax-free held", "tax-free spent", "tax-deferred", "estate")
 
 
@@ -137,6 +141,12 @@ class _Proof:
         gross = problem.gross
         self.growth = np.stack([gross - problem.drag[:, None], gross, gross], axis=-1)  # (p, q, 3)
         self.discounted = problem.discount * problem.node_weights[None, :, None] * self.growth
+        riskiest = np.log(gross[gross.std(axis=1).argmax()])
+        spread = riskiest - problem.node_weights @ riskiest
+        self.z = spread / np.sqrt(problem.node_weights @ spread**2 + 1e-300)
+        self.middle = int(np.abs(self.z).argmin())
+        # An estate's price has to keep pace with those of the living: tilting these alone made it worse.
+        self.tilted = problem.n_portfolios > 1 and not problem.estate.wanted
         self.keep = np.array([1.0, 1.0 - problem.heirs_tax_rate, 1.0])
         self.empty = EMPTY * max(problem.wealth, problem.utility.essential)
         self.little = LITTLE * problem.utility.essential
@@ -205,6 +215,10 @@ class _Proof:
             (float(chances[h2]) * prices for h2, prices in ahead.items()), start=np.zeros(grown.shape)
         )
         passed = problem.death[t, h] * estate_price[:, :, None] * self.keep
+        if self.tilted:
+            tilt = self._tilt(choice, decision, living, passed)
+            living = living * tilt[:, :, None]
+            ahead = {h2: prices * tilt[:, :, None] for h2, prices in ahead.items()}
         expect = Expectation(self._expected(living), self._expected(passed))
 
         limit = factor[path] * raw[path]
@@ -234,6 +248,27 @@ class _Proof:
         stays = (1.0 - problem.minimum_share[t, h]) * most_deferred[path]
         grows = problem.gross.max(axis=0)[node]
         most_deferred[path] = (stays + problem.contribution[t, h, TAX_DEFERRED]) * grows
+
+    def _tilt(
+        self, choice: YearChoice, decision: Decision, living: FloatArray, passed: FloatArray
+    ) -> FloatArray:
+        """Factors (n, q) by return node on next year's raw prices that make the held portfolio the best.
+
+        exp(tau z), z the node's standardised return, the same for all accounts, so that their ratios stay
+        as they are read. On a list of portfolios the held one is best only on the whole and roughly; at
+        prices as read, some account gains in another. Of the tau tried, the one with the least slack on
+        what is held, plus what tilted prices of cash cost by spending that obeys them.
+        """
+        spent = np.maximum(choice.year.spending, 0.0) / self.problem.utility.risk_aversion
+        price = living[:, self.middle, TAXABLE]
+        best, least = np.zeros(spent.size), np.full(spent.size, np.inf)
+        for tau in TILTS:
+            expected = self._expected(living * np.exp(tau * self.z)[:, None] + passed)
+            held = np.take_along_axis(expected, decision.portfolio[:, None, None], axis=1)[:, 0]
+            slack = ((expected.max(axis=1) - held) * choice.left).sum(axis=1)
+            cost = slack + 0.5 * STRAYING * tau**2 * spent * price
+            best, least = np.where(cost < least, tau, best), np.minimum(cost, least)
+        return np.exp(best[:, None] * self.z)
 
     def _expected(self, values: FloatArray) -> FloatArray:
         return np.asarray(np.einsum("nqi,pqi->npi", values, self.discounted))
