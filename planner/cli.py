@@ -6,13 +6,15 @@ imports are local to commands, so that help appears at once.
 
 from __future__ import annotations
 
+import _thread
 import os
 import signal
 import sys
+import threading
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager, suppress
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, TypeVar
+from typing import TYPE_CHECKING, Annotated, Any, TypeVar
 
 import typer
 from rich.console import Console
@@ -60,10 +62,11 @@ def reporting_errors() -> Iterator[None]:
     developers.
     """
     console = Console(stderr=True, highlight=False)
-    before = signal.getsignal(signal.SIGTERM)
+    before, before_ignored = signal.getsignal(signal.SIGTERM), sys.unraisablehook
     try:
         # Being asked to end is an interrupt, so that no temporary file is left behind.
         signal.signal(signal.SIGTERM, signal.default_int_handler)
+        sys.unraisablehook = _interrupt_again(before_ignored)
         yield
     except InputError as error:
         for problem in error.diagnostics:
@@ -98,7 +101,26 @@ def reporting_errors() -> Iterator[None]:
         console.print(f"[red]error[/] the program failed ({escape(what)}); please report it", soft_wrap=True)
         raise typer.Exit(1) from None
     finally:
+        sys.unraisablehook = before_ignored
         signal.signal(signal.SIGTERM, before)
+
+
+def _interrupt_again(otherwise: Callable[[sys.UnraisableHookArgs], object]) -> Callable[[Any], object]:
+    """Return a hook for exceptions that Python drops: an interrupt among them comes once more.
+
+    One that arrives inside a finaliser or the like (importing has some) would be printed with its
+    traceback and the program go on.
+    """
+
+    def hook(dropped: sys.UnraisableHookArgs) -> object:
+        if dropped.exc_type is not KeyboardInterrupt:
+            return otherwise(dropped)
+        timer = threading.Timer(0.02, _thread.interrupt_main, (signal.SIGTERM,))
+        timer.daemon = True
+        timer.start()
+        return None
+
+    return hook
 
 
 def _place_of(error: Exception) -> str:

@@ -14,11 +14,12 @@ import zipfile
 from pathlib import Path
 
 import pytest
+import typer
 from client_workbooks import SAMPLES
 from typer.testing import CliRunner
 
 from planner import files
-from planner.cli import app
+from planner.cli import app, reporting_errors
 from planner.files import write_all, write_whole
 from planner.workbook.saving import workbook_bytes
 from planner.workbook.writing import make_workbook
@@ -71,6 +72,25 @@ def test_a_plan_ended_at_any_moment_writes_nothing_or_all(tmp_path, number):
         assert b"Traceback" not in errors
         assert process.returncode in (-number, 130)
         assert list(tmp_path.iterdir()) == []
+
+
+def test_an_interrupt_that_python_drops_comes_again(capsys):
+    """Python drops what is raised in a finaliser; so it did, now and then, with a signal while importing."""
+
+    class Dropping:
+        def __del__(self):
+            signal.raise_signal(signal.SIGTERM)
+
+    def work():
+        with reporting_errors():
+            Dropping()
+            for _ in range(1_000):
+                time.sleep(0.01)
+
+    with pytest.raises(typer.Exit) as ended:
+        work()
+    assert ended.value.exit_code == 130
+    assert capsys.readouterr().err == "interrupted; nothing half-written is left behind\n"
 
 
 def _run_limited(folder, *arguments):
