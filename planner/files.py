@@ -1,7 +1,8 @@
-"""Files are written whole or not at all."""
+"""Files are written whole or not at all, and read only as far as they may go."""
 
 from __future__ import annotations
 
+import errno
 import os
 import platform
 import stat
@@ -10,6 +11,22 @@ from contextlib import contextmanager
 from pathlib import Path
 
 _PART = ".part"
+
+
+def read_limited(path: Path, most: int) -> bytes:
+    """Bytes of a file, one more than `most` at most, so that the caller sees that there are more.
+
+    Raises
+    ------
+    OSError
+        It cannot be read, or is neither a file nor a link to one: a pipe that nobody writes to, or
+        a device that never ends, would hold the program up for good.
+    """
+    kind = path.stat().st_mode
+    if not (stat.S_ISREG(kind) or stat.S_ISDIR(kind)):  # opening says best what a folder is
+        raise OSError(errno.EINVAL, "this is a pipe or a device, not a file", str(path))
+    with path.open("rb") as file:
+        return file.read(most + 1)
 
 
 def write_whole(path: Path, content: bytes, *, clear: bool = True) -> None:
