@@ -163,10 +163,10 @@ def test_a_folder_or_file_that_may_not_be_written(tmp_path, monkeypatch, step):
 
 
 def test_a_workbook_that_may_not_be_read(tmp_path, monkeypatch):
-    def refused(path):
+    def refused(path, mode):
         raise PermissionError(13, "Permission denied", str(path))
 
-    monkeypatch.setattr(Path, "read_bytes", refused)
+    monkeypatch.setattr(Path, "open", refused)
     result = CliRunner().invoke(app, ["check", str(SAMPLE)])
     assert result.exit_code == 1
     assert "permission denied" in result.stderr
