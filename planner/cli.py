@@ -35,7 +35,10 @@ app = typer.Typer(
     rich_markup_mode=None,
 )
 
-ClientWorkbook = Annotated[Path, typer.Argument(metavar="CLIENT.xlsx", help="The client workbook.")]
+# readable=False: typer would call a file that may not be read a mistake in the command line.
+ClientWorkbook = Annotated[
+    Path, typer.Argument(metavar="CLIENT.xlsx", readable=False, help="The client workbook.")
+]
 Futures = Annotated[int | None, typer.Option(min=100, help="Futures to test (default 20,000).")]
 Seed = Annotated[int | None, typer.Option(min=0, help="Seed of the drawn futures; same seed, same plan.")]
 
@@ -185,13 +188,23 @@ def plan(
     client: ClientWorkbook,
     output: Annotated[
         Path | None,
-        typer.Option("-o", "--output", metavar="PLAN.pdf", help="Default: CLIENT.pdf in the current folder."),
+        typer.Option(
+            "-o",
+            "--output",
+            metavar="PLAN.pdf",
+            readable=False,
+            help="Default: CLIENT.pdf in the current folder.",
+        ),
     ] = None,
     workbook: Annotated[
-        Path | None, typer.Option(metavar="RESULTS.xlsx", help="Also write a results workbook.")
+        Path | None,
+        typer.Option(metavar="RESULTS.xlsx", readable=False, help="Also write a results workbook."),
     ] = None,
     as_json: Annotated[
-        Path | None, typer.Option("--json", metavar="RESULTS.json", help="Also write results for programs.")
+        Path | None,
+        typer.Option(
+            "--json", metavar="RESULTS.json", readable=False, help="Also write results for programs."
+        ),
     ] = None,
     password: Annotated[
         bool,
@@ -357,7 +370,8 @@ def snapshot(
 def review(
     client: ClientWorkbook,
     last: Annotated[
-        Path, typer.Option(metavar="RESULTS.json", help="Last year's results, from plan --json.")
+        Path,
+        typer.Option(metavar="RESULTS.json", readable=False, help="Last year's results, from plan --json."),
     ],
     as_json: Annotated[bool, typer.Option("--json", help="Print for other programs.")] = False,
     seed: Seed = None,
@@ -381,9 +395,14 @@ def review(
 
 @app.command()
 def clients(
-    folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="Client workbooks; folders within count.")],
+    folder: Annotated[
+        Path, typer.Argument(metavar="FOLDER", readable=False, help="Client workbooks; folders within count.")
+    ],
     output: Annotated[
-        Path, typer.Option("-o", "--output", metavar="OUT", help="Folder for the results; made if missing.")
+        Path,
+        typer.Option(
+            "-o", "--output", metavar="OUT", readable=False, help="Folder for the results; made if missing."
+        ),
     ] = Path("plans"),
     workers: Annotated[
         int | None, typer.Option(min=1, help="Processes on this machine (default: one a core).")
@@ -403,7 +422,9 @@ def clients(
     ] = None,
     last: Annotated[
         Path | None,
-        typer.Option(metavar="FOLDER", help="Last year's results (default: earlier plans in OUT)."),
+        typer.Option(
+            metavar="FOLDER", readable=False, help="Last year's results (default: earlier plans in OUT)."
+        ),
     ] = None,
     what_ifs: Annotated[
         bool, typer.Option("--what-ifs/--no-what-ifs", help="Also plan for each what-if (part 8).")

@@ -7,7 +7,7 @@ import os
 import platform
 import stat
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 
 _PART = ".part"
@@ -72,7 +72,8 @@ def write_all(contents: Mapping[Path, bytes], *, clear: bool = True) -> None:
                 target.write_bytes(content)
     finally:
         for _, part, _ in staged:
-            part.unlink(missing_ok=True)
+            with suppress(OSError):  # what went wrong first is what to say
+                part.unlink(missing_ok=True)
 
 
 def _write_part(part: Path, target: Path, content: bytes) -> None:

@@ -172,6 +172,41 @@ def test_a_workbook_that_may_not_be_read(tmp_path, monkeypatch):
     assert "permission denied" in result.stderr
 
 
+@pytest.mark.parametrize(
+    "arguments",
+    [
+        ("check", "locked"),
+        ("review", str(SAMPLE), "--last", "locked"),
+        ("plan", "locked", "-o", "locked.pdf"),
+        ("clients", "locked"),
+    ],
+    ids=lambda arguments: arguments[0],
+)
+def test_what_may_not_be_read_is_no_mistake_in_the_command_line(tmp_path, monkeypatch, arguments):
+    """Exit 1 and our words. A folder stands for the locked file: an administrator is refused nothing."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "locked").mkdir()
+    monkeypatch.setattr(os, "access", lambda *arguments, **options: False)
+    result = CliRunner().invoke(app, list(arguments))
+    assert "Usage" not in result.stderr
+    assert result.exit_code in (1, 2)
+    assert result.stderr.startswith("error locked: ")
+
+
+def test_a_read_only_file_system_is_named_with_the_file_that_was_asked_for(tmp_path, monkeypatch):
+    """There even tidying up is refused, which must not hide what went wrong first."""
+
+    def refused(path, *arguments, **options):
+        raise OSError(30, "Read-only file system", str(path))
+
+    for step in ("open", "unlink"):
+        monkeypatch.setattr(files.Path, step, refused)
+    result = CliRunner().invoke(app, ["new", str(tmp_path / "client.xlsx")])
+    assert result.exit_code == 1
+    assert " ".join(result.stderr.split()).endswith("/client.xlsx: read-only file system")
+    assert "part" not in result.stderr
+
+
 def test_a_file_that_may_not_be_written_stays(tmp_path, monkeypatch):
     target = tmp_path / "plan.pdf"
     target.write_bytes(b"old")
