@@ -568,3 +568,52 @@ def test_rules_are_frozen():
     rules = TaxRules("n", "t", "p", "s", 2026, bands={"single": Bands((0.0,), (0.1,))})
     with pytest.raises(AttributeError):
         rules.year = 2027
+
+
+def test_rules_of_which_nothing_is_said_tax_nothing():
+    """Defaults: a law year from 1 January, everything in money of the year, no rate of any kind."""
+    rules = TaxRules("n", "t", "p", "s", 2026)
+    assert (rules.year_starts, rules.taxed, rules.age_at) == ((1, 1), "together", "plan date")
+    assert (rules.checked, rules.notes, rules.regional) == ("", (), "")
+    assert rules.taxable_share(1e5) == 1.0
+    assert (rules.yield_rate, rules.gains_rate, rules.investment_surtax_rate) == (0.0, 0.0, 0.0)
+    assert rules.minimum_distribution_age(1950) is None
+    tax = rules.first_year_tax(
+        [person(70)], withdrawal=1e5, realised_gains=1e5, yields=1e4, law_year=2026, together=True
+    )
+    assert tax == 0.0
+
+
+def test_the_extra_rate_spares_state_pensions_alone_and_by_default():
+    """5 % of what a pension of 20,000 exceeds the allowance of 12,570 by; nothing of a state pension."""
+    rules = load("uk-2025-26")
+    for kind, due in ((PENSION, 0.05 * (20_000 - 12_570)), (STATE, 0.0)):
+        people = [person(70, (kind, 20_000.0))]
+        without, extra = ({}, {"extra_rate": 0.05})
+        composed = [float(tax_of(rules, people, **options)(0.0)) for options in (without, extra)]
+        year = {"withdrawal": 0.0, "law_year": 2026, "together": True}
+        direct = [rules.first_year_tax(people, **year, **options) for options in (without, extra)]
+        for found in (composed, direct):
+            assert found[1] - found[0] == pytest.approx(due, abs=1e-9)
+
+
+def test_gains_and_yields_of_people_taxed_apart_are_taxed_once():
+    """At the planning rates of 18 % and 8.75 %, whether one or two are assessed; a loss is nothing."""
+    rules = load("uk-2025-26")
+    year = {"withdrawal": 0.0, "law_year": 2026, "together": True}
+    for people in ([person(70)], couple(person(70), person(70))):
+        tax = rules.first_year_tax(people, realised_gains=10_000.0, yields=4_000.0, **year)
+        assert tax == pytest.approx(1_800.0 + 350.0)
+        assert rules.first_year_tax(people, realised_gains=-10_000.0, yields=-4_000.0, **year) == 0.0
+
+
+def test_bands_for_gains_without_a_surtax():
+    """Gains lie on top of income: of 20,000 half at 0 %, half at 20 %; interest is income."""
+    text = (
+        HEAD + "[bands]\nsingle = { from = [0], rate = [0.1] }\n"
+        "[gains]\nsingle = { from = [0, 40000], rate = [0.0, 0.2] }"
+    )
+    rules = parse("t", text)
+    year = {"withdrawal": 30_000.0, "law_year": 2026, "together": True}
+    assert rules.first_year_tax([person(70)], realised_gains=20_000.0, **year) == pytest.approx(5_000.0)
+    assert rules.first_year_tax([person(70)], yields=1_000.0, **year) == pytest.approx(3_100.0)
