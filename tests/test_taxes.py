@@ -617,3 +617,5 @@ def test_bands_for_gains_without_a_surtax():
     year = {"withdrawal": 30_000.0, "law_year": 2026, "together": True}
     assert rules.first_year_tax([person(70)], realised_gains=20_000.0, **year) == pytest.approx(5_000.0)
     assert rules.first_year_tax([person(70)], yields=1_000.0, **year) == pytest.approx(3_100.0)
+    alone = rules.first_year_tax([person(70)], realised_gains=20_000.0, **(year | {"withdrawal": 0.0}))
+    assert alone == pytest.approx(0.0, abs=1e-9)
