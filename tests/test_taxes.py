@@ -13,7 +13,7 @@ from numpy.testing import assert_allclose
 
 from planner.diagnostics import InputError
 from planner.household import IncomeKind, OwnTaxRules, SurchargeStep
-from planner.tax_provisions import Bands, Indexing, PartlyTaxedBenefits
+from planner.tax_provisions import Allowance, Bands, Indexing, MinimumDistributions, PartlyTaxedBenefits
 from planner.taxes import TaxedPerson, TaxRules, available, describe, load, none, own, parse, rate_and_room
 
 STATE, PENSION = IncomeKind.STATE_PENSION, IncomeKind.PENSION
@@ -619,3 +619,33 @@ def test_bands_for_gains_without_a_surtax():
     assert rules.first_year_tax([person(70)], yields=1_000.0, **year) == pytest.approx(3_100.0)
     alone = rules.first_year_tax([person(70)], realised_gains=20_000.0, **(year | {"withdrawal": 0.0}))
     assert alone == pytest.approx(0.0, abs=1e-9)
+
+
+def test_what_the_law_does_not_index_falls_in_real_terms():
+    """Ten years at 2 %: bands, surcharges and tiers of benefits begin where 1.02^-10 of their money is."""
+    left = 1.02**-10
+    text = (
+        HEAD + "[bands]\nindexed = false\nsingle = { from = [0, 10000], rate = [0.0, 0.2] }\n"
+        '[surcharges]\nindexed = false\n[[surcharge]]\nstatus = "single"\n'
+        "income_above = 50000\nextra_cost = 700"
+    )
+    tax = tax_of(parse("t", text), [person(70)], 2036, 10, 0.02)
+    assert_allclose(tax([10_000.0 * left, 20_000.0]), [0.0, 0.2 * (20_000 - 10_000 * left)], atol=1e-9)
+    rise = 0.2 * 1.0 + 700.0  # one unit more, and the surcharge
+    assert float(tax(50_000.0 * left + 1.0) - tax(50_000.0 * left)) == pytest.approx(rise)
+    for_good = Indexing(indexed=False, frozen_until=2030)  # never raised, whatever else is said
+    for indexing in (for_good, PartlyTaxedBenefits(0.5, {}, ()).indexing):
+        assert indexing.real_factor(2036, 10, 0.02) == pytest.approx(left, rel=1e-14)
+
+
+def test_nothing_is_due_before_the_first_row_of_a_table():
+    """Neither by those born before the first birth year nor at an age below the first divisor."""
+    due = MinimumDistributions(((1950, 72.0),), ((75, 20.0), (76, 19.0)))
+    assert due.starting_age(1949) is None
+    assert due.divisor(80, 1949) is None
+    assert [due.divisor(age, 1950) for age in (71, 72, 75, 76, 99)] == [None, None, 20.0, 19.0, 19.0]
+
+
+def test_an_allowance_for_the_old_is_not_given_to_the_young():
+    allowance = Allowance("x", {"single": 1.0, "couple": 1.0}, from_age=65)
+    assert [allowance.times(ages, 2026) for ages in ((60, 64), (60, 65), (65, 70))] == [0, 1, 1]
