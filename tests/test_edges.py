@@ -3,13 +3,16 @@
 Coarse grids: what is looked for is overflow, empty ranges and wrong order, not accuracy.
 """
 
+import json
 from dataclasses import replace
 from datetime import date
 from functools import cache
 
 import numpy as np
 import pytest
+from golden_text import rendered
 from households import MARKETS, couple, single
+from test_results_schema import complaints
 
 from planner.diagnostics import InputError
 from planner.household import (
@@ -26,9 +29,15 @@ from planner.household import (
 )
 from planner.optimum.bound import prove
 from planner.optimum.recursion import SolverSettings, solve
+from planner.plan import PlanSettings, make_plan
 from planner.problem_building import build_problem
 from planner.proof import proof
+from planner.reports.export import json_text, results_json, results_workbook
+from planner.reports.pdf import render_pdf
+from planner.reports.terminal import plan_summary
 from planner.simulation import draw_scenarios, simulate
+from planner.workbook.data import WorkbookData
+from planner.workbook.reading import ReadWorkbook
 
 COARSE = SolverSettings(8, 8, 6, 32)
 N_PATHS = 200
@@ -179,3 +188,26 @@ def test_refused_in_words(name):
         make()
     assert code in {problem.code for problem in refused.value.diagnostics}
     assert all(len(problem.message) > 10 for problem in refused.value.diagnostics)
+
+
+WHOLE = (
+    "no money, no income",
+    "a billion",
+    "a loaf costs 300",
+    "aged 118, the table's last but one",
+    "a cost larger than wealth now",
+    "no room to choose",
+)
+
+
+@pytest.mark.parametrize("name", WHOLE)
+def test_a_whole_plan_is_printed_and_written(name):
+    """Nothing on the way from the household to the files trips over a figure, and none is infinite."""
+    read = ReadWorkbook(EDGES[name](), (), WorkbookData({}, {}, frozenset()), "0" * 64)
+    quick = PlanSettings(100, n_proof_paths=10, solver=COARSE, rules=("divisor",), what_ifs=False)
+    plan = make_plan(read, quick)
+    written = json.loads(json_text(results_json(plan)))  # refuses what is not finite
+    assert complaints(written) == []
+    assert results_workbook(plan).startswith(b"PK")
+    assert render_pdf(plan).startswith(b"%PDF")
+    assert rendered(plan_summary(plan))
