@@ -25,7 +25,7 @@ from tree_oracle import TreeOptimum, random_problem, tree_optimum, value_on_tree
 
 from planner.cashflow import Year
 from planner.markets import lognormal_returns
-from planner.optimum.bound import TERMS, PriceReader, prove
+from planner.optimum.bound import TERMS, Gap, PriceReader, prove
 from planner.optimum.duals import YearChoice
 from planner.optimum.policy import OptimalPolicy
 from planner.optimum.recursion import SolverSettings, solve
@@ -387,3 +387,12 @@ def test_a_wasteful_plan_is_found_out() -> None:
     own = prove(problem, policy, 2_000, np.random.default_rng(2), scenarios=paths)
     assert own.mean < 0.2 * cost, (own.mean, cost)
     assert cost <= gap.mean <= 1.35 * cost, (gap.mean, cost)
+
+
+def test_mean_and_standard_error_of_the_gap_by_hand() -> None:
+    """Totals 1, 2 and 6: mean 3; squared deviations 4 + 1 + 9, over 2, is 7; 7 over 3 paths."""
+    terms = np.zeros((3, len(TERMS)))
+    terms[:, 0], terms[:, -1] = [1.0, 1.0, 2.0], [0.0, 1.0, 4.0]
+    gap = Gap(terms, np.zeros(3), np.zeros(3))
+    assert gap.mean == pytest.approx(3.0)
+    assert gap.standard_error == pytest.approx(np.sqrt(7.0 / 3.0))
