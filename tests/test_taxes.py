@@ -469,6 +469,15 @@ def test_own_brackets_serve_the_other_status_where_it_has_none():
     assert float(tax_of(each, people)(30_000.0)) == pytest.approx(3_000)
 
 
+def test_own_brackets_and_surcharges_by_status():
+    """Each status has its own where both are given, in whatever order the rows stand."""
+    rows = (("couple", 0.0, 0.2), ("single", 20_000.0, 0.4), ("single", 0.0, 0.1))
+    steps = (SurchargeStep("couple", 50_000.0, 700.0), SurchargeStep("single", 40_000.0, 300.0))
+    rules = own(OwnTaxRules(brackets=rows, surcharges=steps))
+    assert_allclose(tax_of(rules, [person(70)])([30_000.0, 40_001.0]), [6_000.0, 10_300.4])
+    assert_allclose(tax_of(rules, couple(person(70), person(70)))([40_001.0, 50_001.0]), [8_000.2, 10_700.2])
+
+
 def test_surcharges_are_whole_costs_paid_by_each_person_of_age():
     single = tax_of(SURCHARGED, [person(70)]) - tax_of(SURCHARGED, [person(64)])
     assert_allclose(
@@ -515,6 +524,7 @@ def test_impossible_own_rules_are_refused(rules, code):
     with pytest.raises(InputError) as raised:
         own(rules)
     assert code_of(raised) == [code]
+    assert [problem.where for problem in raised.value.diagnostics] == ["own_tax"]
 
 
 # --- the files --------------------------------------------------------------------------------
@@ -524,7 +534,10 @@ def test_unknown_rules_name_the_near_miss():
     with pytest.raises(InputError) as raised:
         load("us-federal-2062")
     assert code_of(raised) == ["tax-rules-unknown"]
-    assert "us-federal-20" in str(raised.value)
+    assert "did you mean 'us-federal-20" in str(raised.value)
+    with pytest.raises(InputError) as raised:
+        load("zzz")
+    assert all(name in str(raised.value) for name in available())
 
 
 HEAD = 'title = "t"\npublisher = "p"\nsource = "s"\nyear = 2026\n'
