@@ -121,6 +121,8 @@ def read_last(path: Path) -> LastPlan:
         for row in data["lookup"]:
             pair = (_number(row["balance"]), _number(row["spending"]))
             rows.setdefault(str(row["status"]), []).append(pair)
+        if not rows.keys() & {"both", "first"} or rows.keys() - {"both", "first", "second"}:
+            raise ValueError("not the statuses of one client or a couple")
         lookup = {
             status: (tuple(b for b, _ in sorted(pairs)), tuple(c for _, c in sorted(pairs)))
             for status, pairs in rows.items()
@@ -138,7 +140,7 @@ def read_last(path: Path) -> LastPlan:
             band=None
             if band is None
             else (_number(band["low"]), _number(band["high"]), _number(band["tolerance"])),
-            survivors=tuple(str(view["survivor"]) for view in data.get("survivors", ())),
+            survivors=tuple(str(view["survivor"]) for view in data.get("survivors", ())[:2]),
         )
     except (ValueError, KeyError, TypeError, IndexError, AttributeError, RecursionError) as error:
         missing = f"there is no {error}" if isinstance(error, KeyError) else "it cannot be read as such"

@@ -140,10 +140,20 @@ def test_results_of_an_older_version_are_read_or_refused_with_the_version(tmp_pa
     assert [problem.code for problem in error.value.diagnostics] == ["results-unreadable"]
 
 
-def test_what_is_no_number_is_refused(tmp_path):
-    """It would turn every figure of the review into one that is none."""
+def nobody(results):
+    for row in results["lookup"]:
+        row["status"] = "second"
+
+
+def empty(results):
+    results["lookup"] = []
+
+
+@pytest.mark.parametrize("change", [no_number, nobody, empty])
+def test_what_a_review_could_not_use_is_refused(tmp_path, change):
+    """NaN would turn every figure into one that is none; a look-up for nobody has nothing to look up."""
     with pytest.raises(InputError) as error:
-        read_last(written(tmp_path, no_number))
+        read_last(written(tmp_path, change))
     assert "version" not in str(error.value)  # this version wrote it
 
 
