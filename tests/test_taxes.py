@@ -495,7 +495,8 @@ def test_surcharges_are_whole_costs_paid_by_each_person_of_age():
 
 def test_a_surcharge_without_an_age_is_paid_once():
     rules = own(OwnTaxRules(surcharges=(SurchargeStep("couple", 50_000.0, 700.0),)))
-    assert_allclose(tax_of(rules, couple(person(50), person(70)))([50_000.0, 50_001.0]), [0.0, 700.0])
+    for people in (couple(person(50), person(70)), [person(70)]):  # singles have none of their own
+        assert_allclose(tax_of(rules, people)([50_000.0, 50_001.0]), [0.0, 700.0])
 
 
 def test_own_minimum_distributions():
@@ -507,7 +508,9 @@ def test_own_minimum_distributions():
         22.0,
     ]
     assert own(OwnTaxRules(minimum_distribution_age=72)).minimum_distribution_divisor(80, 1960) is None
-    assert own(OwnTaxRules(divisors=((75, 22.0),))).minimum_distribution_divisor(75, 1960) == 22.0
+    without_age = own(OwnTaxRules(divisors=((75, 22.0), (76, 1.0))))  # due from the first row on
+    assert without_age.minimum_distribution_age(1960) == 75
+    assert [without_age.minimum_distribution_divisor(age, 1960) for age in (74, 75, 76)] == [None, 22.0, 1.0]
 
 
 @pytest.mark.parametrize(
@@ -515,6 +518,7 @@ def test_own_minimum_distributions():
     [
         (OwnTaxRules(brackets=(("single", 0.0, 0.1), ("single", 0.0, 0.2))), "tax-brackets-invalid"),
         (OwnTaxRules(brackets=(("single", 0.0, 10.0),)), "tax-brackets-invalid"),
+        (OwnTaxRules(brackets=(("single", 0.0, 1.01),)), "tax-brackets-invalid"),
         (OwnTaxRules(brackets=(("couple", -5.0, 0.1),)), "tax-brackets-invalid"),
         (OwnTaxRules(divisors=((70, 0.0),)), "tax-divisors-invalid"),
         (OwnTaxRules(divisors=((70, 10.0), (70, 9.0))), "tax-divisors-invalid"),
@@ -525,6 +529,11 @@ def test_impossible_own_rules_are_refused(rules, code):
         own(rules)
     assert code_of(raised) == [code]
     assert [problem.where for problem in raised.value.diagnostics] == ["own_tax"]
+
+
+def test_own_rates_of_nothing_and_of_everything_are_rates():
+    rules = own(OwnTaxRules(brackets=(("single", 0.0, 0.0), ("single", 1_000.0, 1.0))))
+    assert_allclose(tax_of(rules, [person(70)])([1_000.0, 1_500.0]), [0.0, 500.0])
 
 
 # --- the files --------------------------------------------------------------------------------
@@ -662,3 +671,19 @@ def test_nothing_is_due_before_the_first_row_of_a_table():
 def test_an_allowance_for_the_old_is_not_given_to_the_young():
     allowance = Allowance("x", {"single": 1.0, "couple": 1.0}, from_age=65)
     assert [allowance.times(ages, 2026) for ages in ((60, 64), (60, 65), (65, 70))] == [0, 1, 1]
+
+
+def test_what_a_worked_case_may_say():
+    text = (
+        HEAD + '[[worked_case]]\nlabel = "l"\nsource = "s"\nlaw_year = 2024\ntogether = false\n'
+        "withdrawal = 5\ngains = 6\nyields = 7\ntax = 8\n"
+        "person = [{ age = 70, pension = 1 }, { age = 60, withdrawal_share = 0.3 }]"
+    )
+    (case,) = parse("t", text).worked_cases
+    assert (case.law_year, case.together) == (2024, False)
+    assert (case.withdrawal, case.gains, case.yields, case.tax) == (5.0, 6.0, 7.0, 8.0)
+    assert [(p.age, p.birth_year, p.withdrawal_share) for p in case.people] == [
+        (70, 1954, 0.5),
+        (60, 1964, 0.3),
+    ]
+    assert case.people[0].incomes == ((PENSION, 1.0, None),)
