@@ -479,10 +479,11 @@ def test_own_brackets_and_surcharges_by_status():
 
 
 def test_surcharges_are_whole_costs_paid_by_each_person_of_age():
-    single = tax_of(SURCHARGED, [person(70)]) - tax_of(SURCHARGED, [person(64)])
-    assert_allclose(
-        single([100_000.0, 100_001.0, 150_000.0, 150_001.0]), [0.0, 900.0, 900.0, 2_000.0], atol=1e-9
-    )
+    for of_age in (65, 70):
+        single = tax_of(SURCHARGED, [person(of_age)]) - tax_of(SURCHARGED, [person(64)])
+        assert_allclose(
+            single([100_000.0, 100_001.0, 150_000.0, 150_001.0]), [0.0, 900.0, 900.0, 2_000.0], atol=1e-9
+        )
     both = tax_of(SURCHARGED, couple(person(70), person(66))) - tax_of(
         SURCHARGED, couple(person(60), person(64))
     )
