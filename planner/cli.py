@@ -6,13 +6,15 @@ imports are local to commands, so that help appears at once.
 
 from __future__ import annotations
 
+import _thread
 import os
 import signal
 import sys
+import threading
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager, suppress
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, TypeVar
+from typing import TYPE_CHECKING, Annotated, Any, TypeVar
 
 import typer
 from rich.console import Console
@@ -33,7 +35,10 @@ app = typer.Typer(
     rich_markup_mode=None,
 )
 
-ClientWorkbook = Annotated[Path, typer.Argument(metavar="CLIENT.xlsx", help="The client workbook.")]
+# readable=False: typer would call a file that may not be read a mistake in the command line.
+ClientWorkbook = Annotated[
+    Path, typer.Argument(metavar="CLIENT.xlsx", readable=False, help="The client workbook.")
+]
 Futures = Annotated[int | None, typer.Option(min=100, help="Futures to test (default 20,000).")]
 Seed = Annotated[int | None, typer.Option(min=0, help="Seed of the drawn futures; same seed, same plan.")]
 
@@ -60,10 +65,11 @@ def reporting_errors() -> Iterator[None]:
     developers.
     """
     console = Console(stderr=True, highlight=False)
-    before = signal.getsignal(signal.SIGTERM)
+    before, before_ignored = signal.getsignal(signal.SIGTERM), sys.unraisablehook
     try:
         # Being asked to end is an interrupt, so that no temporary file is left behind.
         signal.signal(signal.SIGTERM, signal.default_int_handler)
+        sys.unraisablehook = _interrupt_again(before_ignored)
         yield
     except InputError as error:
         for problem in error.diagnostics:
@@ -98,7 +104,26 @@ def reporting_errors() -> Iterator[None]:
         console.print(f"[red]error[/] the program failed ({escape(what)}); please report it", soft_wrap=True)
         raise typer.Exit(1) from None
     finally:
+        sys.unraisablehook = before_ignored
         signal.signal(signal.SIGTERM, before)
+
+
+def _interrupt_again(otherwise: Callable[[sys.UnraisableHookArgs], object]) -> Callable[[Any], object]:
+    """Return a hook for exceptions that Python drops: an interrupt among them comes once more.
+
+    One that arrives inside a finaliser or the like (importing has some) would be printed with its
+    traceback and the program go on.
+    """
+
+    def hook(dropped: sys.UnraisableHookArgs) -> object:
+        if dropped.exc_type is not KeyboardInterrupt:
+            return otherwise(dropped)
+        timer = threading.Timer(0.02, _thread.interrupt_main, (signal.SIGTERM,))
+        timer.daemon = True
+        timer.start()
+        return None
+
+    return hook
 
 
 def _place_of(error: Exception) -> str:
@@ -163,13 +188,23 @@ def plan(
     client: ClientWorkbook,
     output: Annotated[
         Path | None,
-        typer.Option("-o", "--output", metavar="PLAN.pdf", help="Default: CLIENT.pdf in the current folder."),
+        typer.Option(
+            "-o",
+            "--output",
+            metavar="PLAN.pdf",
+            readable=False,
+            help="Default: CLIENT.pdf in the current folder.",
+        ),
     ] = None,
     workbook: Annotated[
-        Path | None, typer.Option(metavar="RESULTS.xlsx", help="Also write a results workbook.")
+        Path | None,
+        typer.Option(metavar="RESULTS.xlsx", readable=False, help="Also write a results workbook."),
     ] = None,
     as_json: Annotated[
-        Path | None, typer.Option("--json", metavar="RESULTS.json", help="Also write results for programs.")
+        Path | None,
+        typer.Option(
+            "--json", metavar="RESULTS.json", readable=False, help="Also write results for programs."
+        ),
     ] = None,
     password: Annotated[
         bool,
@@ -335,7 +370,8 @@ def snapshot(
 def review(
     client: ClientWorkbook,
     last: Annotated[
-        Path, typer.Option(metavar="RESULTS.json", help="Last year's results, from plan --json.")
+        Path,
+        typer.Option(metavar="RESULTS.json", readable=False, help="Last year's results, from plan --json."),
     ],
     as_json: Annotated[bool, typer.Option("--json", help="Print for other programs.")] = False,
     seed: Seed = None,
@@ -359,9 +395,14 @@ def review(
 
 @app.command()
 def clients(
-    folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="Client workbooks; folders within count.")],
+    folder: Annotated[
+        Path, typer.Argument(metavar="FOLDER", readable=False, help="Client workbooks; folders within count.")
+    ],
     output: Annotated[
-        Path, typer.Option("-o", "--output", metavar="OUT", help="Folder for the results; made if missing.")
+        Path,
+        typer.Option(
+            "-o", "--output", metavar="OUT", readable=False, help="Folder for the results; made if missing."
+        ),
     ] = Path("plans"),
     workers: Annotated[
         int | None, typer.Option(min=1, help="Processes on this machine (default: one a core).")
@@ -381,7 +422,9 @@ def clients(
     ] = None,
     last: Annotated[
         Path | None,
-        typer.Option(metavar="FOLDER", help="Last year's results (default: earlier plans in OUT)."),
+        typer.Option(
+            metavar="FOLDER", readable=False, help="Last year's results (default: earlier plans in OUT)."
+        ),
     ] = None,
     what_ifs: Annotated[
         bool, typer.Option("--what-ifs/--no-what-ifs", help="Also plan for each what-if (part 8).")

@@ -14,6 +14,8 @@ FILE_CODES: Final[dict[str, str]] = {
     "file-old-format": "an .xls workbook, the format before .xlsx",
     "file-open-document": "an OpenDocument spreadsheet (.ods)",
     "file-macros": "a workbook with macros (.xlsm)",
+    "file-binary": "a binary workbook (.xlsb)",
+    "file-strict": "an .xlsx workbook in the 'strict' form, which few programs write",
     "file-not-xlsx": "not an .xlsx workbook at all",
     "file-damaged": "an .xlsx workbook cut short or damaged",
     "file-too-large": "far larger than a client workbook can be",

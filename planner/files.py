@@ -1,15 +1,32 @@
-"""Files are written whole or not at all."""
+"""Files are written whole or not at all, and read only as far as they may go."""
 
 from __future__ import annotations
 
+import errno
 import os
 import platform
 import stat
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 
 _PART = ".part"
+
+
+def read_limited(path: Path, most: int) -> bytes:
+    """Bytes of a file, one more than `most` at most, so that the caller sees that there are more.
+
+    Raises
+    ------
+    OSError
+        It cannot be read, or is neither a file nor a link to one: a pipe that nobody writes to, or
+        a device that never ends, would hold the program up for good.
+    """
+    kind = path.stat().st_mode
+    if not (stat.S_ISREG(kind) or stat.S_ISDIR(kind)):  # opening says best what a folder is
+        raise OSError(errno.EINVAL, "this is a pipe or a device, not a file", str(path))
+    with path.open("rb") as file:
+        return file.read(most + 1)
 
 
 def write_whole(path: Path, content: bytes, *, clear: bool = True) -> None:
@@ -55,7 +72,8 @@ def write_all(contents: Mapping[Path, bytes], *, clear: bool = True) -> None:
                 target.write_bytes(content)
     finally:
         for _, part, _ in staged:
-            part.unlink(missing_ok=True)
+            with suppress(OSError):  # what went wrong first is what to say
+                part.unlink(missing_ok=True)
 
 
 def _write_part(part: Path, target: Path, content: bytes) -> None:

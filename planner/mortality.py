@@ -21,8 +21,6 @@ from planner.household import OwnLifeTable, Sex
 from planner.piecewise import FloatArray
 from planner.soa_tables import is_number, numbered_table
 
-STATUSES_OF_COUPLE = ("both", "first", "second")
-STATUSES_OF_SINGLE = ("first",)
 NEGLIGIBLE_SURVIVAL = 1e-9  # the horizon ends where anyone is alive with less chance than this
 
 

@@ -13,12 +13,16 @@ from typing import Any, Final
 import numpy as np
 from scipy.special import ndtr, ndtri
 
+from planner import __version__
+from planner.checks import shortened
 from planner.diagnostics import Diagnostic, InputError
+from planner.files import read_limited
 from planner.household import Household
 from planner.instructions import first_year, this_year
 from planner.plan import PlanSettings, Progress, first_choice, solve_household
 from planner.plan_record import Range
 
+LARGEST_RESULTS: Final = 50_000_000  # bytes; a plan's have under one million
 FEW_PATHS: Final = 500
 """Futures drawn to read this year's choice off the new plan, which is the same in all of them."""
 
@@ -102,16 +106,23 @@ def read_last(path: Path) -> LastPlan:
     Raises
     ------
     InputError
-        Code ``results-unreadable``: not such a file, or a key is missing.
+        Code ``results-unreadable``: not such a file, or a key is missing; where another version of
+        the program wrote it, the message says which.
     OSError
         The file cannot be read.
     """
-    content = path.read_bytes()
+    content = read_limited(path, LARGEST_RESULTS)
+    data: Any = None
     try:
+        if len(content) > LARGEST_RESULTS:
+            raise ValueError("too large")
         data = json.loads(content)
         rows: dict[str, list[tuple[float, float]]] = {}
         for row in data["lookup"]:
-            rows.setdefault(str(row["status"]), []).append((float(row["balance"]), float(row["spending"])))
+            pair = (_number(row["balance"]), _number(row["spending"]))
+            rows.setdefault(str(row["status"]), []).append(pair)
+        if not rows.keys() & {"both", "first"} or rows.keys() - {"both", "first", "second"}:
+            raise ValueError("not the statuses of one client or a couple")
         lookup = {
             status: (tuple(b for b, _ in sorted(pairs)), tuple(c for _, c in sorted(pairs)))
             for status, pairs in rows.items()
@@ -122,19 +133,35 @@ def read_last(path: Path) -> LastPlan:
             client=str(data["client"]),
             plan_date=date.fromisoformat(data["plan_date"]),
             currency=str(data["currency"]),
-            spending=float(data["this_year"]["spending"]),
+            spending=_number(data["this_year"]["spending"]),
             portfolio=str(data["this_year"]["portfolio"]),
-            balance=Range(float(fan["p10"]), float(fan["p50"]), float(fan["p90"])),
+            balance=Range(*(_number(fan[key]) for key in ("p10", "p50", "p90"))),
             lookup=lookup,
             band=None
             if band is None
-            else (float(band["low"]), float(band["high"]), float(band["tolerance"])),
-            survivors=tuple(str(view["survivor"]) for view in data.get("survivors", ())),
+            else (_number(band["low"]), _number(band["high"]), _number(band["tolerance"])),
+            survivors=tuple(str(view["survivor"]) for view in data.get("survivors", ())[:2]),
         )
-    except (ValueError, KeyError, TypeError, IndexError, AttributeError) as error:
+    except (ValueError, KeyError, TypeError, IndexError, AttributeError, RecursionError) as error:
         missing = f"there is no {error}" if isinstance(error, KeyError) else "it cannot be read as such"
         message = f"expected a results file written by 'planner plan --json' a year ago; {missing}"
+        message += _other_version(data)
         raise InputError([Diagnostic("results-unreadable", str(path), message)]) from None
+
+
+def _number(value: object) -> float:
+    if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
+        raise ValueError("not a number")
+    return float(value)
+
+
+def _other_version(data: object) -> str:
+    """Say which other version of the program wrote results, so far as they tell."""
+    sources = data.get("sources") if isinstance(data, dict) else None
+    version = sources.get("program_version") if isinstance(sources, dict) else None
+    if not isinstance(version, str) or version == __version__:
+        return ""
+    return f" (version {shortened(version)} of the program wrote it, this is {__version__})"
 
 
 def review(

@@ -11,7 +11,7 @@ from functools import cache
 
 import numpy as np
 import pytest
-from builders import couple_problem, plain_problem
+from builders import couple_problem, plain_problem, single_problem
 from every_path import (
     Noise,
     NoisyPrices,
@@ -25,7 +25,7 @@ from tree_oracle import TreeOptimum, random_problem, tree_optimum, value_on_tree
 
 from planner.cashflow import Year
 from planner.markets import lognormal_returns
-from planner.optimum.bound import TERMS, PriceReader, prove
+from planner.optimum.bound import TERMS, Gap, PriceReader, prove
 from planner.optimum.duals import YearChoice
 from planner.optimum.policy import OptimalPolicy
 from planner.optimum.recursion import SolverSettings, solve
@@ -387,3 +387,29 @@ def test_a_wasteful_plan_is_found_out() -> None:
     own = prove(problem, policy, 2_000, np.random.default_rng(2), scenarios=paths)
     assert own.mean < 0.2 * cost, (own.mean, cost)
     assert cost <= gap.mean <= 1.35 * cost, (gap.mean, cost)
+
+
+def test_mean_and_standard_error_of_the_gap_by_hand() -> None:
+    """Totals 1, 2 and 6: mean 3; squared deviations 4 + 1 + 9, over 2, is 7; 7 over 3 paths."""
+    terms = np.zeros((3, len(TERMS)))
+    terms[:, 0], terms[:, -1] = [1.0, 1.0, 2.0], [0.0, 1.0, 4.0]
+    gap = Gap(terms, np.zeros(3), np.zeros(3))
+    assert gap.mean == pytest.approx(3.0)
+    assert gap.standard_error == pytest.approx(np.sqrt(7.0 / 3.0))
+
+
+def test_an_estate_that_takes_nearly_the_whole_limit_in_one_portfolio_alone() -> None:
+    """Death is likely, and one portfolio loses 70 % for certain, so the estate's price is the other's.
+
+    Limiting it by the portfolio where an estate is worth least gives terms of -7e-4 of the bound.
+    """
+    generator = np.random.default_rng(3)
+    base = single_problem(6)
+    gross = np.stack([np.full(base.gross.shape[1], 0.3), base.gross[1] * generator.uniform(1, 2)])
+    death = np.full((6, 1), generator.uniform(0.5, 0.95))
+    death[-1] = 1.0
+    estate = EstateUtility(base.utility, generator.uniform(1, 8), 20_000.0)
+    chances = {"death": death, "transition": (1 - death)[:, :, None]}
+    problem = replace(base, gross=gross, estate=estate, heirs_tax_rate=0.2, **chances)
+    gap = prove(problem, solve(problem, COARSE), 300, np.random.default_rng(1))
+    assert gap.terms.min() >= -1e-13 * np.abs(gap.bound).max()  # rounding: 3e-17 seen

@@ -9,7 +9,14 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
-from planner.cashflow import advance, estate_money, least_withdrawal, withdraw_for_spending, withdraw_gross
+from planner.cashflow import (
+    advance,
+    estate_money,
+    grow,
+    least_withdrawal,
+    withdraw_for_spending,
+    withdraw_gross,
+)
 from planner.piecewise import PiecewiseLinear
 from planner.problem import TAX_DEFERRED, TAX_FREE, TAXABLE, Decision, Problem, State
 
@@ -291,3 +298,67 @@ def test_a_marginal_rate_of_exactly_one_is_passed_over():
     """From 100 to 200 every unit goes in tax: 150 after tax takes 250."""
     tax = PiecewiseLinear(np.array([0.0, 100.0, 200.0]), np.array([0.0, 0.0, 100.0]), 0.0)
     assert least_withdrawal(tax, 150.0) == 250.0
+
+
+def test_growth_of_balances_in_any_shape():
+    """Accounts are the last axis; drag is taxable's alone."""
+    gross, drag = np.array([[1.1, 0.9]]), np.array([[0.01], [0.02]])  # (1, 2) and (2, 1): all (2, 2)
+    grown = grow(np.full((2, 2, 3), 100.0), gross, drag)
+    assert_allclose(grown[..., TAXABLE], [[109.0, 89.0], [108.0, 88.0]], rtol=1e-14)
+    assert_allclose(grown[..., TAX_FREE], [[110.0, 90.0], [110.0, 90.0]], rtol=1e-14)
+
+
+def test_what_left_each_account():
+    """Income above spending is added to taxable, so that nothing left it; 3,000 then leaves it."""
+    problem = problem_of(bracket_tax(), income=12_000.0)
+    for spending, left in ((5_000.0, 0.0), (12_000.5, 0.5), (15_000.0, 3_000.0)):
+        decision = Decision(np.zeros(1), np.zeros(1), np.array([spending]), np.array([0]), np.zeros((1, 0)))
+        year = advance(problem, 0, one_path((10_000.0, 1_000.0, 1_000.0)), decision, np.ones(1))
+        assert_allclose(year.withdrawal[0], [left, 0.0, 0.0], atol=1e-9)  # rounding at 1e4
+
+
+def test_an_account_withdrawn_from_entirely_is_empty():
+    problem = problem_of(bracket_tax())
+    decision = Decision(np.array([1e9]), np.zeros(1), np.zeros(1), np.array([0]), np.zeros((1, 0)))
+    year = advance(problem, 0, one_path((0.0, 1_000.0, 0.0)), decision, np.ones(1))
+    assert year.closing[0, TAX_DEFERRED] == 0.0
+
+
+def test_the_ceiling_rises_and_falls_with_the_need():
+    """A ceiling of 30,000 at half the need: 15,000, whoever decides."""
+    problem = problem_of(bracket_tax(), ceiling=30_000.0, need=np.array([[0.5]]))
+    state = one_path((90_000.0, 0.0, 0.0))
+    decision = Decision(np.zeros(1), np.zeros(1), np.array([50_000.0]), np.array([0]), np.zeros((1, 0)))
+    assert advance(problem, 0, state, decision, np.ones(1)).spending[0] == 15_000.0
+    assert withdraw_gross(problem, 0, state, np.array([50_000.0]))[1][0] == 15_000.0
+
+
+def test_a_large_cost_on_one_path_leaves_the_others_alone():
+    """In the second status 60,000 fall due; the first spends its half unit of money as it is."""
+    problem = single_problem(
+        1,
+        statuses=("first", "second"),
+        transition=np.zeros((1, 2, 2)),
+        death=np.ones((1, 2)),
+        tax=((bracket_tax(), bracket_tax()),),
+        income=np.array([[0.0, -60_000.0]]),
+        contribution=np.zeros((1, 2, 3)),
+        need=np.ones((1, 2)),
+        minimum_share=np.zeros((1, 2)),
+        accessible_share=np.ones((1, 2)),
+    )
+    balances = np.tile([30_000.0, 100_000.0, 0.0], (2, 1))
+    nothing = np.zeros(2)
+    state = State(balances, np.array([0, 1]), np.ones(2), nothing, nothing, np.zeros((2, 0)))
+    w2, c = withdraw_gross(problem, 0, state, np.array([0.5, 0.5]))
+    assert_allclose(c, [0.5, 0.0])
+    assert w2[0] == 0.0
+    assert kept(bracket_tax(), w2[1]) == pytest.approx(30_000.0)
+
+
+def test_least_withdrawals_of_many_at_once():
+    """Nothing where nothing is asked for; less than a unit; across a stretch where all goes in tax."""
+    tax = PiecewiseLinear(np.array([0.0, 100.0, 200.0]), np.array([0.0, 0.0, 100.0]), 0.0)
+    assert_allclose(least_withdrawal(tax, [0.0, 0.5, 50.0, 150.0]), [0.0, 0.5, 50.0, 250.0], rtol=1e-14)
+    # 150 keeps 100, which is enough: where the next unit kept lies does not matter.
+    assert least_withdrawal(tax, 100.0, 150.0) == 150.0

@@ -6,6 +6,7 @@ from pathlib import Path
 import pytest
 import typer
 
+from planner import taxes
 from planner.cli import app
 from planner.rules import RULES
 
@@ -62,3 +63,12 @@ def test_nothing_mentions_the_machine_it_was_written_on():
     shipped = [*ROOT.glob("*.md"), *(ROOT / "planner").rglob("*.py"), *(ROOT / "sample_clients").glob("*.py")]
     for path in shipped:
         assert not re.search(r"/work/|/root/|/tmp/|/home/", path.read_text("utf-8")), path
+
+
+def test_the_rules_shown_as_an_example_are_rules():
+    """They are read as a file would be, misspelt keys and all, and their worked case is right to the cent."""
+    (text,) = re.findall(r"```toml\n(.*?)```", DEVELOPERS, re.DOTALL)
+    rules = taxes.parse("freedonia-2026", text)
+    (case,) = rules.worked_cases
+    tax = rules.first_year_tax(case.people, withdrawal=0.0, law_year=case.law_year, together=case.together)
+    assert tax == pytest.approx(case.tax, abs=0.005)

@@ -14,11 +14,12 @@ import zipfile
 from pathlib import Path
 
 import pytest
+import typer
 from client_workbooks import SAMPLES
 from typer.testing import CliRunner
 
 from planner import files
-from planner.cli import app
+from planner.cli import app, reporting_errors
 from planner.files import write_all, write_whole
 from planner.workbook.saving import workbook_bytes
 from planner.workbook.writing import make_workbook
@@ -71,6 +72,25 @@ def test_a_plan_ended_at_any_moment_writes_nothing_or_all(tmp_path, number):
         assert b"Traceback" not in errors
         assert process.returncode in (-number, 130)
         assert list(tmp_path.iterdir()) == []
+
+
+def test_an_interrupt_that_python_drops_comes_again(capsys):
+    """Python drops what is raised in a finaliser; so it did, now and then, with a signal while importing."""
+
+    class Dropping:
+        def __del__(self):
+            signal.raise_signal(signal.SIGTERM)
+
+    def work():
+        with reporting_errors():
+            Dropping()
+            for _ in range(1_000):
+                time.sleep(0.01)
+
+    with pytest.raises(typer.Exit) as ended:
+        work()
+    assert ended.value.exit_code == 130
+    assert capsys.readouterr().err == "interrupted; nothing half-written is left behind\n"
 
 
 def _run_limited(folder, *arguments):
@@ -143,13 +163,48 @@ def test_a_folder_or_file_that_may_not_be_written(tmp_path, monkeypatch, step):
 
 
 def test_a_workbook_that_may_not_be_read(tmp_path, monkeypatch):
-    def refused(path):
+    def refused(path, mode):
         raise PermissionError(13, "Permission denied", str(path))
 
-    monkeypatch.setattr(Path, "read_bytes", refused)
+    monkeypatch.setattr(Path, "open", refused)
     result = CliRunner().invoke(app, ["check", str(SAMPLE)])
     assert result.exit_code == 1
     assert "permission denied" in result.stderr
+
+
+@pytest.mark.parametrize(
+    "arguments",
+    [
+        ("check", "locked"),
+        ("review", str(SAMPLE), "--last", "locked"),
+        ("plan", "locked", "-o", "locked.pdf"),
+        ("clients", "locked"),
+    ],
+    ids=lambda arguments: arguments[0],
+)
+def test_what_may_not_be_read_is_no_mistake_in_the_command_line(tmp_path, monkeypatch, arguments):
+    """Exit 1 and our words. A folder stands for the locked file: an administrator is refused nothing."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "locked").mkdir()
+    monkeypatch.setattr(os, "access", lambda *arguments, **options: False)
+    result = CliRunner().invoke(app, list(arguments))
+    assert "Usage" not in result.stderr
+    assert result.exit_code in (1, 2)
+    assert result.stderr.startswith("error locked: ")
+
+
+def test_a_read_only_file_system_is_named_with_the_file_that_was_asked_for(tmp_path, monkeypatch):
+    """There even tidying up is refused, which must not hide what went wrong first."""
+
+    def refused(path, *arguments, **options):
+        raise OSError(30, "Read-only file system", str(path))
+
+    for step in ("open", "unlink"):
+        monkeypatch.setattr(files.Path, step, refused)
+    result = CliRunner().invoke(app, ["new", str(tmp_path / "client.xlsx")])
+    assert result.exit_code == 1
+    assert " ".join(result.stderr.split()).endswith("/client.xlsx: read-only file system")
+    assert "part" not in result.stderr
 
 
 def test_a_file_that_may_not_be_written_stays(tmp_path, monkeypatch):

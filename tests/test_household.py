@@ -13,6 +13,7 @@ from planner.diagnostics import InputError
 from planner.household import (
     Account,
     AccountType,
+    AnnuityQuote,
     AssetClass,
     History,
     Income,
@@ -36,6 +37,7 @@ ANA = Person("Lin", date(1945, 3, 3), "female", "us-ssa-2022", 0.9)
 CLASSES = MARKETS.asset_classes
 PENSION = Income("Pension", "Lin", IncomeKind.PENSION, 14_000.0, 65.0)
 DEPOSIT = Account("Deposit", "Lin", AccountType.TAXABLE, 250_000.0)
+QUOTE = AnnuityQuote("Lin", "Deposit", 0.06)
 OWN_TAX = OwnTaxRules(brackets=(("single", 0.0, 0.0), ("single", 10_000.0, 0.2)))
 
 
@@ -161,6 +163,20 @@ ERRORS = [
     ),
     ("amount-negative", "preferences.wish_to_leave", {"preferences": Preferences(wish_to_leave=-1.0)}),
     ("heirs-tax-range", "preferences.heirs_tax_rate", {"preferences": Preferences(heirs_tax_rate=1.0)}),
+    ("account-unknown", "annuity_quote.account", {"annuity_quote": replace(QUOTE, account="Pott")}),
+    ("owner-unknown", "annuity_quote.owner", {"annuity_quote": replace(QUOTE, owner="Linn")}),
+    ("annuity-rate-range", "annuity_quote.rate", {"annuity_quote": replace(QUOTE, rate=0.0)}),
+    (
+        "continuation-kind",
+        "annuity_quote.continues_to_partner",
+        {"annuity_quote": replace(QUOTE, continues_to_partner="larger of the two")},
+    ),
+    (
+        "number-not-finite",
+        "preferences.fallback_income",
+        {"preferences": Preferences(fallback_income=float("nan"))},
+    ),
+    ("name-missing", "one_offs[0].item", {"one_offs": (OneOff(" ", 2030, 1.0),)}),
     ("tax-rules-unknown", "tax_rules", {"tax_rules": "us-federal-2062"}),
     ("tax-own-missing", "tax_rules", {"tax_rules": "own"}),
     ("rate-range", "extra_income_tax_rate", {"extra_income_tax_rate": 0.9}),

@@ -7,6 +7,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose, assert_array_equal
 
+from planner import mortality
 from planner.diagnostics import InputError
 from planner.household import OwnLifeTable
 from planner.mortality import (
@@ -268,3 +269,84 @@ def test_an_own_table_may_say_that_death_is_certain_before_its_end():
     assert_array_equal(table.male, [1.0, 0.5, 1.0])
     with pytest.raises(InputError):
         own_table(OwnLifeTable((90, 91), (0.1, 1.0 + 1e-9), (0.1, 1.0)))
+
+
+def test_survival_starts_with_a_living_person():
+    assert_array_equal(survival([0.5, 1.0]), [1.0, 0.5, 0.0])
+
+
+def test_years_to_the_end_of_the_table():
+    """At omega itself death is certain within the year, which counts."""
+    assert years_to_omega(load_table("us-ssa-2022"), 65) == 119 - 65 + 1
+    assert years_to_omega(load_table("us-ssa-2022"), 118) == 2
+
+
+def test_the_horizon_ends_below_a_billionth():
+    assert horizon([1.0 - 1.05e-9, 0.5, 1.0]) == 2
+    assert horizon([1.0 - 0.95e-9, 0.5, 1.0]) == 1
+    assert horizon([0.1, 0.1]) == 2  # chances that end before life does: as far as they go
+
+
+def test_a_negative_multiplier_is_refused():
+    with pytest.raises(ValueError, match="negative"):
+        death_probabilities(load_table("us-ssa-2022"), "male", 65, 5, -0.1)
+    assert death_probabilities(load_table("us-ssa-2022"), "male", 65, 5, 0.0).max() == 0.0
+
+
+def test_one_impossible_probability_among_good_ones_is_refused():
+    with pytest.raises(ValueError, match="probabilities"):
+        transitions([0.1, 1.1])
+
+
+TABLE = """# title: Freedonia, life table: 2020
+# publisher: Office of Numbers
+# source: invented for this test
+# year: 2020
+# a remark without a colon's use
+age,female,male,female_improvement,male_improvement
+60,0.1,0.2,0.01,0.03
+61,0.3,0.4,0.02,0.04
+62,0.5,0.6,0.00,0.00
+"""
+
+
+@pytest.fixture
+def folder(tmp_path, monkeypatch):
+    """A folder of life tables with one table and a file that is none."""
+    (tmp_path / "freedonia.csv").write_text(TABLE, encoding="utf-8")
+    (tmp_path / "README.md").write_text("not a table", encoding="utf-8")
+    monkeypatch.setattr(mortality, "_folder", lambda: tmp_path)
+    load_table.cache_clear()
+    yield tmp_path
+    load_table.cache_clear()
+
+
+def test_a_table_added_as_one_file(folder):
+    """Listed with its source; each sex with probabilities and improvement of its own."""
+    assert available_tables() == ("freedonia",)
+    (said,) = describe()
+    assert (said.title, said.publisher) == ("Freedonia, life table: 2020", "Office of Numbers")
+    assert (said.year, said.ages, said.improvement) == (2020, (60, 62), True)
+    table = load_table("freedonia")
+    for sex, q, fall in (("female", [0.1, 0.3], [0.01, 0.02]), ("male", [0.2, 0.4], [0.03, 0.04])):
+        found = death_probabilities(table, sex, 60, 3, plan_year=2021)
+        expected = np.array(q) * (1.0 - np.array(fall)) ** [1, 2]
+        assert_allclose(found, [*expected, 1.0], rtol=1e-14)
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "why"),
+    [("61,", "63,", "not consecutive"), (",female,", ",women,", "needed"), (",male,", ",men,", "needed")],
+)
+def test_a_table_that_is_not_sound_is_refused(folder, old, new, why):
+    (folder / "freedonia.csv").write_text(TABLE.replace(old, new, 1), encoding="utf-8")
+    with pytest.raises(ValueError, match=why):
+        load_table("freedonia")
+
+
+def test_a_name_like_no_other_is_answered_with_all_there_are():
+    with pytest.raises(InputError) as raised:
+        load_table("zzz")
+    assert all(name in str(raised.value) for name in available_tables())
+    with pytest.raises(InputError, match="did you mean 'us-ssa-2022'"):
+        load_table("us-ssa-2202")

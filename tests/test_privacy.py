@@ -2,12 +2,14 @@
 
 Every command runs in a process of its own under an audit hook, which Python cannot be talked out
 of: it records every file opened for writing and ends the process at the first sign of a network
-or of another program.
+or of another program. The processes that a command starts are under the same watch.
 """
 
 import io
 import json
+import os
 import re
+import shutil
 import subprocess
 import sys
 import zipfile
@@ -23,7 +25,7 @@ from planner.workbook.reading import read_workbook
 
 WATCHED = """
 import os, sys
-written = open(sys.argv[1], "a", buffering=1)
+written = open(os.environ["WATCH_LOG"], "a", buffering=1)
 FORBIDDEN = ("socket.", "urllib.", "http.", "ftplib.", "smtplib.", "subprocess.", "os.system", "os.exec",
              "os.posix_spawn", "os.startfile", "webbrowser.")
 def watch(event, arguments):
@@ -37,9 +39,6 @@ def watch(event, arguments):
     elif event in ("os.mkdir", "tempfile.mkstemp", "tempfile.mkdtemp"):
         written.write(f"{arguments[0]}\\n")
 sys.addaudithook(watch)
-sys.argv = ["planner", *sys.argv[2:]]
-from planner.cli import main
-main()
 """
 
 NASTY = (
@@ -50,10 +49,13 @@ NASTY = (
 
 def run_watched(folder, *arguments):
     """Run a command; return what it printed, its exit code and the files it opened for writing."""
-    log = folder.parent / f"{folder.name}.log"
+    log, hook = folder.parent / f"{folder.name}.log", folder.parent / f"{folder.name}.watch"
     log.write_text("")
-    command = [sys.executable, "-c", WATCHED, str(log), *map(str, arguments)]
-    done = subprocess.run(command, cwd=folder, capture_output=True, text=True, check=False)
+    hook.mkdir(exist_ok=True)
+    (hook / "sitecustomize.py").write_text(WATCHED)  # run by every Python process when it starts
+    environment = os.environ | {"PYTHONPATH": str(hook), "WATCH_LOG": str(log)}
+    command = [sys.executable, "-m", "planner.cli", *map(str, arguments)]
+    done = subprocess.run(command, cwd=folder, env=environment, capture_output=True, text=True, check=False)
     opened = {Path(folder, line) for line in log.read_text().splitlines() if line != "/dev/null"}
     return done, {path for path in opened if "__pycache__" not in path.parts}
 
@@ -66,6 +68,7 @@ def run_watched(folder, *arguments):
         ("tables",),
         ("new", "blank.xlsx"),
         ("compare", SAMPLES / "single_with_pension.xlsx", "--futures", 100, "--rule", "divisor"),
+        ("snapshot", SAMPLES / "single_with_pension.xlsx", "--futures", 100),
     ],
     ids=lambda arguments: arguments[0],
 )
@@ -74,6 +77,20 @@ def test_commands_write_only_what_is_asked_for_and_call_nobody(tmp_path, argumen
     assert done.returncode in (0, 2), done.stderr
     assert {path.parent for path in opened} <= {tmp_path}
     assert [path.name for path in tmp_path.iterdir()] == (["blank.xlsx"] if arguments[0] == "new" else [])
+
+
+def test_a_client_list_writes_into_its_folder_alone_and_calls_nobody(tmp_path):
+    clients, folder = tmp_path / "clients", tmp_path / "here"
+    for path in (clients, folder):
+        path.mkdir()
+    shutil.copy(SAMPLES / "single_with_pension.xlsx", clients)
+    options = ("-o", "out", "--workers", 1, "--futures", 100, "--no-what-ifs")
+    done, opened = run_watched(folder, "clients", clients, *options)
+    assert done.returncode == 0, done.stderr
+    assert opened
+    assert all((folder / "out") in (path, *path.parents) for path in opened)
+    assert [path.name for path in folder.iterdir()] == ["out"]
+    assert [path.name for path in clients.iterdir()] == ["single_with_pension.xlsx"]
 
 
 def nasty_values():
@@ -136,6 +153,13 @@ def test_a_plan_with_hostile_texts(tmp_path):
 
     results = json.loads((folder / "r.json").read_text("utf-8"))
     assert results["client"] == household.client_name
+    # A year on: last year's results hold the same texts.
+    results["plan_date"] = str(household.plan_date.replace(year=household.plan_date.year - 1))
+    (tmp_path / "last.json").write_text(json.dumps(results), "utf-8")
+    reviewed, opened = run_watched(folder, "review", client, "--last", tmp_path / "last.json")
+    assert reviewed.returncode == 0, reviewed.stderr
+    assert opened == set()
+
     text = " ".join(page.extract_text() for page in PdfReader(folder / "p.pdf").pages)
     plain = re.sub(r"\s+", "", text)
     for name in account_names(household):
@@ -147,3 +171,18 @@ def test_a_plan_with_hostile_texts(tmp_path):
 
 def account_names(household: Household) -> list[str]:
     return [account.name for account in household.accounts]
+
+
+def test_the_watch_sees_what_it_is_for(tmp_path):
+    """In a process that a watched one starts: a file is recorded, a socket ends it."""
+    folder = tmp_path / "here"
+    folder.mkdir()
+    done, _ = run_watched(folder, "tables")
+    assert done.returncode == 0
+    code = f"open({str(folder / 'x')!r}, 'w'); import socket; socket.socket(); print('never reached')"
+    log = tmp_path / "here.log"
+    environment = os.environ | {"PYTHONPATH": str(tmp_path / "here.watch"), "WATCH_LOG": str(log)}
+    caught = subprocess.run([sys.executable, "-c", code], env=environment, capture_output=True, check=False)
+    assert caught.returncode == 99
+    assert b"never reached" not in caught.stdout
+    assert str(folder / "x") in log.read_text().splitlines()

@@ -6,7 +6,7 @@ from datetime import date
 
 import numpy as np
 import pytest
-from golden_text import assert_golden, rendered
+from golden_text import GOLDEN, assert_golden, rendered
 from households import single
 from scipy.stats import norm
 
@@ -100,13 +100,69 @@ def test_other_results_are_refused(changes, code):
     assert [problem.code for problem in error.value.diagnostics] == [code]
 
 
-@pytest.mark.parametrize("text", ["", "[]", "{}", '{"client": "x"}', "\x00"])
+@pytest.mark.parametrize("text", ["", "[]", "{}", '{"client": "x"}', "\x00", "[" * 100_000, "9" * 10_000])
 def test_a_file_that_is_no_results_file(tmp_path, text):
     path = tmp_path / "last.json"
     path.write_text(text, "utf-8")
     with pytest.raises(InputError) as error:
         read_last(path)
     assert [problem.code for problem in error.value.diagnostics] == ["results-unreadable"]
+
+
+def written(tmp_path, change=lambda results: None):
+    """A results file as `planner plan` writes it, changed."""
+    results = json.loads((GOLDEN / "results.json").read_text("utf-8"))
+    change(results)
+    path = tmp_path / "last.json"
+    path.write_text(json.dumps(results), "utf-8")
+    return path
+
+
+def older(results):
+    results["sources"]["program_version"] = "0.0.1"
+
+
+def older_and_lacking(results):
+    older(results)
+    del results["lookup"]
+
+
+def no_number(results):
+    results["schedule"][1]["balance"]["p50"] = float("nan")
+
+
+def test_results_of_an_older_version_are_read_or_refused_with_the_version(tmp_path):
+    assert read_last(written(tmp_path, older)) == read_last(written(tmp_path))
+    with pytest.raises(
+        InputError, match=r"there is no 'lookup' \(version 0\.0\.1 of the program wrote it"
+    ) as error:
+        read_last(written(tmp_path, older_and_lacking))
+    assert [problem.code for problem in error.value.diagnostics] == ["results-unreadable"]
+
+
+def nobody(results):
+    for row in results["lookup"]:
+        row["status"] = "second"
+
+
+def empty(results):
+    results["lookup"] = []
+
+
+@pytest.mark.parametrize("change", [no_number, nobody, empty])
+def test_what_a_review_could_not_use_is_refused(tmp_path, change):
+    """NaN would turn every figure into one that is none; a look-up for nobody has nothing to look up."""
+    with pytest.raises(InputError) as error:
+        read_last(written(tmp_path, change))
+    assert "version" not in str(error.value)  # this version wrote it
+
+
+def test_results_beyond_all_sizes_are_not_read_to_their_end(tmp_path):
+    path = tmp_path / "last.json"
+    with path.open("wb") as file:
+        file.truncate(3_000_000_000)  # takes no room: it is a hole
+    with pytest.raises(InputError):
+        read_last(path)
 
 
 def test_reads_what_plan_writes(tmp_path):

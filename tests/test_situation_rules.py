@@ -116,3 +116,6 @@ def test_an_allowance_is_given_in_the_years_of_its_law():
     allowance = Allowance("x", {"single": 1.0}, per_person=True, from_age=65, first_year=2025, last_year=2028)
     given = [allowance.times((64, 65, 66), year) for year in (2024, 2025, 2028, 2029)]
     assert given == [0, 2, 2, 0]
+    once = Allowance("x", {"single": 1.0})  # to those assessed together, whatever their ages and the year
+    assert [once.times(ages, 1900) for ages in ((30,), (64, 66))] == [1, 1]
+    assert (once.reduced_by, once.indexing.real_factor(2026, 10, 0.1)) == (0.0, 1.0)

@@ -117,6 +117,7 @@ def test_without_the_package(monkeypatch):
         soa_tables.numbered_table("soa-2585")
 
 
+@pytest.mark.filterwarnings("ignore::DeprecationWarning")  # the package opens its files the old way
 @pytest.mark.skipif(importlib.util.find_spec("pymort") is None, reason="the extra 'soa' is not installed")
 def test_the_package_itself():
     """Annuity 2000 for men, ages 5 to 115, and projection scale E."""

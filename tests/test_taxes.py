@@ -13,7 +13,7 @@ from numpy.testing import assert_allclose
 
 from planner.diagnostics import InputError
 from planner.household import IncomeKind, OwnTaxRules, SurchargeStep
-from planner.tax_provisions import Bands, Indexing, PartlyTaxedBenefits
+from planner.tax_provisions import Allowance, Bands, Indexing, MinimumDistributions, PartlyTaxedBenefits
 from planner.taxes import TaxedPerson, TaxRules, available, describe, load, none, own, parse, rate_and_room
 
 STATE, PENSION = IncomeKind.STATE_PENSION, IncomeKind.PENSION
@@ -469,11 +469,21 @@ def test_own_brackets_serve_the_other_status_where_it_has_none():
     assert float(tax_of(each, people)(30_000.0)) == pytest.approx(3_000)
 
 
+def test_own_brackets_and_surcharges_by_status():
+    """Each status has its own where both are given, in whatever order the rows stand."""
+    rows = (("couple", 0.0, 0.2), ("single", 20_000.0, 0.4), ("single", 0.0, 0.1))
+    steps = (SurchargeStep("couple", 50_000.0, 700.0), SurchargeStep("single", 40_000.0, 300.0))
+    rules = own(OwnTaxRules(brackets=rows, surcharges=steps))
+    assert_allclose(tax_of(rules, [person(70)])([30_000.0, 40_001.0]), [6_000.0, 10_300.4])
+    assert_allclose(tax_of(rules, couple(person(70), person(70)))([40_001.0, 50_001.0]), [8_000.2, 10_700.2])
+
+
 def test_surcharges_are_whole_costs_paid_by_each_person_of_age():
-    single = tax_of(SURCHARGED, [person(70)]) - tax_of(SURCHARGED, [person(64)])
-    assert_allclose(
-        single([100_000.0, 100_001.0, 150_000.0, 150_001.0]), [0.0, 900.0, 900.0, 2_000.0], atol=1e-9
-    )
+    for of_age in (65, 70):
+        single = tax_of(SURCHARGED, [person(of_age)]) - tax_of(SURCHARGED, [person(64)])
+        assert_allclose(
+            single([100_000.0, 100_001.0, 150_000.0, 150_001.0]), [0.0, 900.0, 900.0, 2_000.0], atol=1e-9
+        )
     both = tax_of(SURCHARGED, couple(person(70), person(66))) - tax_of(
         SURCHARGED, couple(person(60), person(64))
     )
@@ -486,7 +496,8 @@ def test_surcharges_are_whole_costs_paid_by_each_person_of_age():
 
 def test_a_surcharge_without_an_age_is_paid_once():
     rules = own(OwnTaxRules(surcharges=(SurchargeStep("couple", 50_000.0, 700.0),)))
-    assert_allclose(tax_of(rules, couple(person(50), person(70)))([50_000.0, 50_001.0]), [0.0, 700.0])
+    for people in (couple(person(50), person(70)), [person(70)]):  # singles have none of their own
+        assert_allclose(tax_of(rules, people)([50_000.0, 50_001.0]), [0.0, 700.0])
 
 
 def test_own_minimum_distributions():
@@ -498,7 +509,9 @@ def test_own_minimum_distributions():
         22.0,
     ]
     assert own(OwnTaxRules(minimum_distribution_age=72)).minimum_distribution_divisor(80, 1960) is None
-    assert own(OwnTaxRules(divisors=((75, 22.0),))).minimum_distribution_divisor(75, 1960) == 22.0
+    without_age = own(OwnTaxRules(divisors=((75, 22.0), (76, 1.0))))  # due from the first row on
+    assert without_age.minimum_distribution_age(1960) == 75
+    assert [without_age.minimum_distribution_divisor(age, 1960) for age in (74, 75, 76)] == [None, 22.0, 1.0]
 
 
 @pytest.mark.parametrize(
@@ -506,6 +519,7 @@ def test_own_minimum_distributions():
     [
         (OwnTaxRules(brackets=(("single", 0.0, 0.1), ("single", 0.0, 0.2))), "tax-brackets-invalid"),
         (OwnTaxRules(brackets=(("single", 0.0, 10.0),)), "tax-brackets-invalid"),
+        (OwnTaxRules(brackets=(("single", 0.0, 1.01),)), "tax-brackets-invalid"),
         (OwnTaxRules(brackets=(("couple", -5.0, 0.1),)), "tax-brackets-invalid"),
         (OwnTaxRules(divisors=((70, 0.0),)), "tax-divisors-invalid"),
         (OwnTaxRules(divisors=((70, 10.0), (70, 9.0))), "tax-divisors-invalid"),
@@ -515,6 +529,12 @@ def test_impossible_own_rules_are_refused(rules, code):
     with pytest.raises(InputError) as raised:
         own(rules)
     assert code_of(raised) == [code]
+    assert [problem.where for problem in raised.value.diagnostics] == ["own_tax"]
+
+
+def test_own_rates_of_nothing_and_of_everything_are_rates():
+    rules = own(OwnTaxRules(brackets=(("single", 0.0, 0.0), ("single", 1_000.0, 1.0))))
+    assert_allclose(tax_of(rules, [person(70)])([1_000.0, 1_500.0]), [0.0, 500.0])
 
 
 # --- the files --------------------------------------------------------------------------------
@@ -524,7 +544,10 @@ def test_unknown_rules_name_the_near_miss():
     with pytest.raises(InputError) as raised:
         load("us-federal-2062")
     assert code_of(raised) == ["tax-rules-unknown"]
-    assert "us-federal-20" in str(raised.value)
+    assert "did you mean 'us-federal-20" in str(raised.value)
+    with pytest.raises(InputError) as raised:
+        load("zzz")
+    assert all(name in str(raised.value) for name in available())
 
 
 HEAD = 'title = "t"\npublisher = "p"\nsource = "s"\nyear = 2026\n'
@@ -568,3 +591,100 @@ def test_rules_are_frozen():
     rules = TaxRules("n", "t", "p", "s", 2026, bands={"single": Bands((0.0,), (0.1,))})
     with pytest.raises(AttributeError):
         rules.year = 2027
+
+
+def test_rules_of_which_nothing_is_said_tax_nothing():
+    """Defaults: a law year from 1 January, everything in money of the year, no rate of any kind."""
+    rules = TaxRules("n", "t", "p", "s", 2026)
+    assert (rules.year_starts, rules.taxed, rules.age_at) == ((1, 1), "together", "plan date")
+    assert (rules.checked, rules.notes, rules.regional) == ("", (), "")
+    assert rules.taxable_share(1e5) == 1.0
+    assert (rules.yield_rate, rules.gains_rate, rules.investment_surtax_rate) == (0.0, 0.0, 0.0)
+    assert rules.minimum_distribution_age(1950) is None
+    tax = rules.first_year_tax(
+        [person(70)], withdrawal=1e5, realised_gains=1e5, yields=1e4, law_year=2026, together=True
+    )
+    assert tax == 0.0
+
+
+def test_the_extra_rate_spares_state_pensions_alone_and_by_default():
+    """5 % of what a pension of 20,000 exceeds the allowance of 12,570 by; nothing of a state pension."""
+    rules = load("uk-2025-26")
+    for kind, due in ((PENSION, 0.05 * (20_000 - 12_570)), (STATE, 0.0)):
+        people = [person(70, (kind, 20_000.0))]
+        without, extra = ({}, {"extra_rate": 0.05})
+        composed = [float(tax_of(rules, people, **options)(0.0)) for options in (without, extra)]
+        year = {"withdrawal": 0.0, "law_year": 2026, "together": True}
+        direct = [rules.first_year_tax(people, **year, **options) for options in (without, extra)]
+        for found in (composed, direct):
+            assert found[1] - found[0] == pytest.approx(due, abs=1e-9)
+
+
+def test_gains_and_yields_of_people_taxed_apart_are_taxed_once():
+    """At the planning rates of 18 % and 8.75 %, whether one or two are assessed; a loss is nothing."""
+    rules = load("uk-2025-26")
+    year = {"withdrawal": 0.0, "law_year": 2026, "together": True}
+    for people in ([person(70)], couple(person(70), person(70))):
+        tax = rules.first_year_tax(people, realised_gains=10_000.0, yields=4_000.0, **year)
+        assert tax == pytest.approx(1_800.0 + 350.0)
+        assert rules.first_year_tax(people, realised_gains=-10_000.0, yields=-4_000.0, **year) == 0.0
+
+
+def test_bands_for_gains_without_a_surtax():
+    """Gains lie on top of income: of 20,000 half at 0 %, half at 20 %; interest is income."""
+    text = (
+        HEAD + "[bands]\nsingle = { from = [0], rate = [0.1] }\n"
+        "[gains]\nsingle = { from = [0, 40000], rate = [0.0, 0.2] }"
+    )
+    rules = parse("t", text)
+    year = {"withdrawal": 30_000.0, "law_year": 2026, "together": True}
+    assert rules.first_year_tax([person(70)], realised_gains=20_000.0, **year) == pytest.approx(5_000.0)
+    assert rules.first_year_tax([person(70)], yields=1_000.0, **year) == pytest.approx(3_100.0)
+    alone = rules.first_year_tax([person(70)], realised_gains=20_000.0, **(year | {"withdrawal": 0.0}))
+    assert alone == pytest.approx(0.0, abs=1e-9)
+
+
+def test_what_the_law_does_not_index_falls_in_real_terms():
+    """Ten years at 2 %: bands, surcharges and tiers of benefits begin where 1.02^-10 of their money is."""
+    left = 1.02**-10
+    text = (
+        HEAD + "[bands]\nindexed = false\nsingle = { from = [0, 10000], rate = [0.0, 0.2] }\n"
+        '[surcharges]\nindexed = false\n[[surcharge]]\nstatus = "single"\n'
+        "income_above = 50000\nextra_cost = 700"
+    )
+    tax = tax_of(parse("t", text), [person(70)], 2036, 10, 0.02)
+    assert_allclose(tax([10_000.0 * left, 20_000.0]), [0.0, 0.2 * (20_000 - 10_000 * left)], atol=1e-9)
+    rise = 0.2 * 1.0 + 700.0  # one unit more, and the surcharge
+    assert float(tax(50_000.0 * left + 1.0) - tax(50_000.0 * left)) == pytest.approx(rise)
+    for_good = Indexing(indexed=False, frozen_until=2030)  # never raised, whatever else is said
+    for indexing in (for_good, PartlyTaxedBenefits(0.5, {}, ()).indexing):
+        assert indexing.real_factor(2036, 10, 0.02) == pytest.approx(left, rel=1e-14)
+
+
+def test_nothing_is_due_before_the_first_row_of_a_table():
+    """Neither by those born before the first birth year nor at an age below the first divisor."""
+    due = MinimumDistributions(((1950, 72.0),), ((75, 20.0), (76, 19.0)))
+    assert due.starting_age(1949) is None
+    assert due.divisor(80, 1949) is None
+    assert [due.divisor(age, 1950) for age in (71, 72, 75, 76, 99)] == [None, None, 20.0, 19.0, 19.0]
+
+
+def test_an_allowance_for_the_old_is_not_given_to_the_young():
+    allowance = Allowance("x", {"single": 1.0, "couple": 1.0}, from_age=65)
+    assert [allowance.times(ages, 2026) for ages in ((60, 64), (60, 65), (65, 70))] == [0, 1, 1]
+
+
+def test_what_a_worked_case_may_say():
+    text = (
+        HEAD + '[[worked_case]]\nlabel = "l"\nsource = "s"\nlaw_year = 2024\ntogether = false\n'
+        "withdrawal = 5\ngains = 6\nyields = 7\ntax = 8\n"
+        "person = [{ age = 70, pension = 1 }, { age = 60, withdrawal_share = 0.3 }]"
+    )
+    (case,) = parse("t", text).worked_cases
+    assert (case.law_year, case.together) == (2024, False)
+    assert (case.withdrawal, case.gains, case.yields, case.tax) == (5.0, 6.0, 7.0, 8.0)
+    assert [(p.age, p.birth_year, p.withdrawal_share) for p in case.people] == [
+        (70, 1954, 0.5),
+        (60, 1964, 0.3),
+    ]
+    assert case.people[0].incomes == ((PENSION, 1.0, None),)

@@ -1,13 +1,21 @@
 """Files that are no sound .xlsx workbook: each a refusal with its own code, never a traceback."""
 
 import io
+import os
 import re
+import struct
 import zipfile
+from pathlib import Path
 
 import openpyxl
 import pytest
 from client_workbooks import found, saved
+from fuzzing import MAIN, OFFICE, PACKAGE, TYPE
+from openpyxl.chart import BarChart
+from openpyxl.utils.datetime import CALENDAR_MAC_1904
+from typer.testing import CliRunner
 
+from planner.cli import app
 from planner.diagnostics import InputError
 from planner.workbook.reading import read_workbook
 
@@ -28,6 +36,10 @@ CASES = {
     "xls": (OLE_HEADER + bytes(500) + "Workbook".encode("utf-16-le"), "file-old-format"),
     "ods": (archive({"mimetype": "application/vnd.oasis.opendocument.spreadsheet"}), "file-open-document"),
     "xlsm": (archive({"xl/workbook.xml": "<a/>", "xl/vbaProject.bin": "x"}), "file-macros"),
+    "xlsb": (
+        archive({"[Content_Types].xml": "sheet.binary.macroEnabled.main", "xl/workbook.bin": "x"}),
+        "file-binary",
+    ),
     "csv": (b"Client name,Sample\n", "file-not-xlsx"),
     "zip": (archive({"letter.txt": "hello"}), "file-not-xlsx"),
     "damaged": (archive({"xl/workbook.xml": "<workbook", "[Content_Types].xml": "<Types/>"}), "file-damaged"),
@@ -62,6 +74,41 @@ def test_a_damaged_sheet_inside_a_sound_archive(tmp_path):
 def test_unpacking_to_a_vast_size_is_refused(tmp_path, monkeypatch):
     monkeypatch.setattr("planner.workbook.archive.LARGEST_UNPACKED", 1000)
     assert found(saved(tmp_path))[0][0] == "file-too-large"
+
+
+def test_a_file_beyond_all_sizes_is_not_read_to_its_end(tmp_path):
+    """Three gigabytes, and a device that never ends: the suite would notice the memory and the time."""
+    path = tmp_path / "client.xlsx"
+    with path.open("wb") as file:
+        file.write(b"PK")
+        file.truncate(3_000_000_000)  # takes no room: it is a hole
+    assert found(path) == [("file-too-large", "client.xlsx")]
+
+
+def test_pipes_and_devices_are_no_workbooks(tmp_path):
+    """A pipe that nobody writes to would never end, and /dev/zero would never stop."""
+    pipe = tmp_path / "client.xlsx"
+    os.mkfifo(pipe)
+    for path in (pipe, Path("/dev/zero")):
+        result = CliRunner().invoke(app, ["check", str(path)])
+        assert result.exit_code == 1
+        assert result.stderr.endswith("this is a pipe or a device, not a file\n")
+    with pytest.raises(IsADirectoryError):
+        read_workbook(tmp_path)
+
+
+def test_a_part_that_says_less_of_its_size_than_is_true(tmp_path):
+    """It is unpacked as far as it says, 1 kB of 40 MB, and does not agree with its check sum."""
+    packed = io.BytesIO()
+    with zipfile.ZipFile(packed, "w", zipfile.ZIP_DEFLATED) as zipped:
+        zipped.writestr("xl/workbook.xml", "<a/>")
+        zipped.writestr("xl/a.xml", "<a>" + "<b/>" * 10_000_000 + "</a>")
+    content = bytearray(packed.getvalue())
+    entry = content.rfind(b"PK\x01\x02")  # of the last part, in the list at the end of the archive
+    content[entry + 24 : entry + 28] = struct.pack("<I", 1_000)
+    path = tmp_path / "client.xlsx"
+    path.write_bytes(content)
+    assert found(path) == [("file-damaged", "client.xlsx")]
 
 
 def test_no_such_file(tmp_path):
@@ -147,6 +194,62 @@ def test_pictures_and_parts_that_are_no_xml_are_let_be(tmp_path):
         zipped.writestr("xl/media/image1.png", b"\x89PNG\r\n")
         zipped.writestr("xl/drawings/vmlDrawing1.vml", "<xml><br></xml>")
     assert found(path) == []
+
+
+def test_the_strict_form_is_refused_by_name(tmp_path):
+    """It has other names for everything, so that no sheet would be found in it."""
+    main, strict = (
+        "schemas.openxmlformats.org/spreadsheetml/2006/main",
+        "purl.oclc.org/ooxml/spreadsheetml/main",
+    )
+    path = changed(saved(tmp_path), "xl/workbook.xml", lambda text: text.replace(main, strict))
+    assert found(path) == [("file-strict", path.name)]
+
+
+def test_dates_of_the_1904_system(tmp_path):
+    """The same days are stored as numbers smaller by 1,462, and read as the same days."""
+
+    def since_1904(workbook):
+        workbook.epoch = CALENDAR_MAC_1904
+
+    path = saved(tmp_path, edit=since_1904)
+    with zipfile.ZipFile(path) as zipped:
+        assert b'date1904="1"' in zipped.read("xl/workbook.xml")
+    assert read_workbook(path).household == read_workbook(saved(tmp_path)).household
+
+
+def test_links_to_other_files_charts_and_repeated_parts_are_let_be(tmp_path):
+    """What a formula took from another file is read as it was stored; nothing is looked up."""
+    path = saved(tmp_path, edit=lambda book: book.create_chartsheet("Chart").add_chart(BarChart()))
+    with zipfile.ZipFile(path) as zipped:
+        parts = {name: zipped.read(name).decode("utf-8") for name in zipped.namelist()}
+    part = next(name for name in parts if "<v>300000</v>" in parts[name])
+    parts[part] = parts[part].replace("<v>300000</v>", "<f>[1]Other!A1</f><v>300000</v>")
+    link = "xl/externalLinks/externalLink1.xml"
+    parts[link] = (
+        f'<externalLink xmlns="{MAIN}" xmlns:r="{OFFICE}"><externalBook r:id="rId1"><sheetNames>'
+        '<sheetName val="Other"/></sheetNames></externalBook></externalLink>'
+    )
+    parts["xl/externalLinks/_rels/externalLink1.xml.rels"] = (
+        f'<Relationships xmlns="{PACKAGE}"><Relationship Id="rId1" Type="{OFFICE}/externalLinkPath" '
+        'Target="http://192.0.2.1/other.xlsx" TargetMode="External"/></Relationships>'
+    )
+    parts["xl/_rels/workbook.xml.rels"] = parts["xl/_rels/workbook.xml.rels"].replace(
+        "</Relationships>",
+        f'<Relationship Id="rId99" Type="{OFFICE}/externalLink" Target="externalLinks/externalLink1.xml"/>'
+        "</Relationships>",
+    )
+    parts["[Content_Types].xml"] = parts["[Content_Types].xml"].replace(
+        "</Types>", f'<Override PartName="/{link}" ContentType="{TYPE}.externalLink+xml"/></Types>'
+    )
+    parts["xl/workbook.xml"] = parts["xl/workbook.xml"].replace(
+        "</sheets>",
+        f'</sheets><externalReferences><externalReference xmlns:r="{OFFICE}" r:id="rId99"/>'
+        "</externalReferences>",
+    )
+    path.write_bytes(archive(parts))
+    assert openpyxl.load_workbook(path)._external_links  # or this would test nothing
+    assert read_workbook(path).household == read_workbook(saved(tmp_path)).household
 
 
 def fill(sheet, rows, columns, value):

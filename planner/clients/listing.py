@@ -15,8 +15,9 @@ from planner.clients.running import Engine, run
 from planner.clients.store import Store, run_key
 from planner.clients.worker import Finished, Task, Work, plan_client
 from planner.diagnostics import Diagnostic, InputError
-from planner.files import write_whole
+from planner.files import read_limited, write_whole
 from planner.reports.export import json_text
+from planner.workbook.archive import LARGEST_FILE
 
 
 class Watch(Protocol):
@@ -126,7 +127,7 @@ def _rows(
             workbook = shown[path]
             name = names[workbook]
             try:
-                content = path.read_bytes()
+                content = read_limited(path, LARGEST_FILE)
             except OSError as error:
                 reason = f"cannot be read ({(error.strerror or type(error).__name__).lower()})"
                 note(failed_row(name, workbook, failure=reason))

@@ -151,7 +151,7 @@ def _plan_in(path: Path, row: ClientRow) -> LastPlan | None:
         data = json.loads(path.read_text("utf-8"))
         same = data["client"] == row.client and data["currency"] == row.currency
         date, spending = str(data["plan_date"]), float(data["this_year"]["spending"])
-    except (OSError, ValueError, KeyError, TypeError):
+    except (OSError, ValueError, KeyError, TypeError, RecursionError):
         return None
     return LastPlan(date, spending) if same and date < row.plan_date else None
 
@@ -163,7 +163,7 @@ def _read_record(path: Path) -> Record | None:
         if data.pop("form") != _FORM:
             return None
         return Record(**data | {"row": row_from_json(data["row"])})
-    except (OSError, ValueError, KeyError, TypeError):
+    except (OSError, ValueError, KeyError, TypeError, RecursionError):
         return None
 
 

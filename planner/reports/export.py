@@ -19,7 +19,6 @@ from openpyxl.worksheet.properties import PageSetupProperties
 from openpyxl.worksheet.worksheet import Worksheet
 
 from planner.markets import nominal_moments
-from planner.plan import Comparison
 from planner.plan_record import Plan, Range, StrategyResult
 from planner.workbook.saving import workbook_bytes
 
@@ -224,23 +223,6 @@ def strategy_json(result: StrategyResult) -> Json:
         "tax_paid": money(result.tax_paid),
         "reference": result.reference,
     }
-
-
-def comparison_json(before: Comparison, after: Comparison | None, changes: Sequence[tuple[str, str]]) -> Json:
-    """Return a comparison as plain data; `after` and `changes` where the client was changed."""
-    household = before.solved.household
-    data: Json = {
-        "client": household.client_name,
-        "plan_date": household.plan_date.isoformat(),
-        "currency": household.currency,
-        "strategies": [strategy_json(result) for result in before.strategies],
-    }
-    if after is not None:
-        data["what_if"] = {
-            "changes": [{"address": address, "value": value} for address, value in changes],
-            "strategies": [strategy_json(result) for result in after.strategies],
-        }
-    return data
 
 
 def json_text(data: Json) -> str:

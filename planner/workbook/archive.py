@@ -18,12 +18,14 @@ from xml.parsers import expat
 from planner.diagnostics import Diagnostic, InputError
 
 LARGEST_UNPACKED: Final = 30_000_000  # bytes; a client workbook has well under one million
+LARGEST_FILE: Final = LARGEST_UNPACKED
 MOST_PARTS: Final = 1_000  # files in the archive; a client workbook has about 30
 MOST_ELEMENTS: Final = 400_000  # a client workbook has about 5,000
 DEEPEST: Final = 100  # elements within elements; a spreadsheet has about 10
 WIDEST_RANGE: Final = 20_000  # cells joined into one, or under one link, over the whole workbook
 
 _OLE_HEADER: Final = b"\xd0\xcf\x11\xe0\xa1\xb1\x1a\xe1"
+_STRICT: Final = b"http://purl.oclc.org/ooxml/"
 _RANGE: Final = re.compile(r"^\$?([A-Za-z]{1,3})\$?(\d{1,9}):\$?([A-Za-z]{1,3})\$?(\d{1,9})$")
 _FILLS_RANGES: Final = frozenset(("mergeCell", "hyperlink", "comment"))
 _UNREADABLE: Final = (
@@ -44,8 +46,8 @@ def check_file(content: bytes, file_name: str) -> None:
     ------
     InputError
         Codes ``file-empty``, ``file-encrypted``, ``file-old-format``, ``file-open-document``,
-        ``file-macros``, ``file-not-xlsx``, ``file-damaged``, ``file-too-large`` or
-        ``file-entities``.
+        ``file-binary``, ``file-macros``, ``file-strict``, ``file-not-xlsx``, ``file-damaged``,
+        ``file-too-large`` or ``file-entities``.
     """
 
     def refuse(code: str, message: str) -> InputError:
@@ -53,6 +55,8 @@ def check_file(content: bytes, file_name: str) -> None:
 
     if not content:
         raise refuse("file-empty", "the file is empty")
+    if len(content) > LARGEST_FILE:
+        raise refuse("file-too-large", f"the file is larger than {LARGEST_FILE / 1e6:,.0f} MB")
     if content.startswith(_OLE_HEADER):
         if "EncryptedPackage".encode("utf-16-le") in content:
             raise refuse("file-encrypted", "the workbook has a password; save a copy without one")
@@ -72,10 +76,15 @@ def check_file(content: bytes, file_name: str) -> None:
             types = archive.read("[Content_Types].xml") if "[Content_Types].xml" in names else b""
             if b"opendocument" in kind:
                 raise refuse("file-open-document", "this is an OpenDocument file; save it as .xlsx")
+            if "xl/workbook.bin" in names:  # its content type says "macroEnabled", macros or none
+                raise refuse("file-binary", "this is a binary workbook (.xlsb); save it as .xlsx")
             if b"macroEnabled" in types or any(name.endswith("vbaProject.bin") for name in names):
                 raise refuse("file-macros", "this workbook has macros (.xlsm); save it as .xlsx without them")
             if "xl/workbook.xml" not in names and b"spreadsheetml" not in types:
                 raise refuse("file-not-xlsx", "this is not an .xlsx workbook")
+            if "xl/workbook.xml" in names and _STRICT in archive.read("xl/workbook.xml"):
+                message = "this is a Strict Open XML workbook; save it as an ordinary Excel workbook (.xlsx)"
+                raise refuse("file-strict", message)
             walk = _Walk()
             for part in parts:
                 try:

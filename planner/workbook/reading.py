@@ -13,6 +13,7 @@ from typing import Any, Final
 
 from planner.checks import nearest, shortened
 from planner.diagnostics import Diagnostic, InputError
+from planner.files import read_limited
 from planner.household import (
     BEST_EACH_YEAR,
     JOINT,
@@ -42,6 +43,7 @@ from planner.household import (
     risk_aversion_from_gambles,
 )
 from planner.workbook.addresses import replaced
+from planner.workbook.archive import LARGEST_FILE
 from planner.workbook.data import Entry, Row, TableData, WorkbookData
 from planner.workbook.fields import Field, Form, Kind, Table, normalised
 from planner.workbook.layout import IGNORED_COLUMNS, SHEETS
@@ -130,7 +132,7 @@ def read_workbook(path: str | Path) -> ReadWorkbook:
         The file cannot be read.
     """
     file = Path(path)
-    read = read_content(file.read_bytes(), file.name)
+    read = read_content(read_limited(file, LARGEST_FILE), file.name)
     household, warnings = with_logo(read.household, read.data, file.parent)
     return replace(read, household=household, warnings=(*read.warnings, *warnings))
 
