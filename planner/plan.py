@@ -54,7 +54,7 @@ PLAN_KEY = "plan"
 """Key of the optimum among strategies."""
 
 
-COARSE_GRID = 0.7
+COARSE_GRID = 0.65
 """Of the default grids: half the time; on the samples value within 0.1 % and this year's spending
 within 0.2 % of the default's."""
 

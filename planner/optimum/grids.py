@@ -189,7 +189,11 @@ class CashGrid:
 
     @classmethod
     def build(cls, n: int, scale: float, low: float, high: float, kink: float) -> CashGrid:
-        """About n nodes that cover [low, high] and contain 0, and `kink` > 0 twice."""
+        """About n nodes that cover [low, high] and contain 0, and `kink` > 0 twice.
+
+        At a scale above the kink, 0 and the kink would set a step far below the one that n allows.
+        """
+        scale = min(scale, kink)
         at = float(np.arcsinh(kink / scale))
         least, most = float(np.arcsinh(low / scale)), float(np.arcsinh(high / scale))
         to_kink = max(1, round(at / ((most - least) / (n - 2))))

@@ -39,10 +39,10 @@ class SolverSettings:
         Below wealth / `scale` nodes are about evenly spaced, above it in proportion.
     """
 
-    taxable: int = 16
-    tax_deferred: int = 21
+    taxable: int = 14
+    tax_deferred: int = 26
     tax_free: int = 9
-    cash: int = 48
+    cash: int = 72
     top: float = 4.0
     scale: float = 50.0
 
