@@ -230,7 +230,11 @@ class PiecewiseLinear:
             turn = np.abs(np.append(slope[1:], self.last_slope) - slope)  # at knots 1 ...
             room = np.minimum(width, np.append(width[1:], np.inf))
             at_jump = flat | np.append(flat[1:], False)
-            keep = np.append(True, at_jump | (turn * np.where(at_jump, 1.0, room) > y_tolerance))
+            kept = at_jump | (turn * np.where(at_jump, 1.0, room) > y_tolerance)
+            # Of two kinks so close that either could go alone, the first stays and turns for both.
+            next_goes = np.append(~kept[1:], False)
+            kept |= next_goes & (room < width) & (turn * width > y_tolerance)
+            keep = np.append(True, kept)
             if not keep.all():
                 x, y = x[keep], y[keep]
         return PiecewiseLinear(x, y, self.last_slope)

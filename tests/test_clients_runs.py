@@ -189,10 +189,12 @@ def test_nothing_is_written_elsewhere_and_nobody_is_called(folder, tmp_path):
     small, log = tmp_path / "small", tmp_path / "log"
     small.mkdir()
     (small / "a.xlsx").write_bytes((folder / "client_0000.xlsx").read_bytes())
-    hook, imports = WATCHED.split("sys.argv = ")[0], RUN.split("if __name__")[0]
-    code = imports + hook + WATCHED_RUN.replace("TINY", repr(TINY))
-    command = [sys.executable, "-c", code, str(log), str(small), str(tmp_path / "out")]
-    done = subprocess.run(command, cwd=tmp_path, capture_output=True, text=True, timeout=4 * WAIT)
+    code = RUN.split("if __name__")[0] + WATCHED + WATCHED_RUN.replace("TINY", repr(TINY))
+    command = [sys.executable, "-c", code, "watched", str(small), str(tmp_path / "out")]
+    environment = os.environ | {"WATCH_LOG": str(log)}
+    done = subprocess.run(
+        command, cwd=tmp_path, env=environment, capture_output=True, text=True, timeout=4 * WAIT
+    )
     assert done.returncode == 0, done.stderr
     written = {Path(tmp_path, line) for line in log.read_text().splitlines() if line != "/dev/null"}
     kept = {path for path in written if "__pycache__" not in path.parts}

@@ -106,8 +106,8 @@ def test_one_account_agrees_with_brute_force() -> None:
 
 # Short trees as linear programs --------------------------------------------------------------------
 
-FINE = SolverSettings().scaled(2)
-"""Twice the ordinary nodes: with two or three return nodes and three years to live, kinks of the last
+FINE = SolverSettings().scaled(2.5)
+"""More nodes than usual: with two or three return nodes and three years to live, kinks of the last
 years are not smoothed away as they are in a plan of decades, so these trees ask more of a grid."""
 
 
