@@ -262,6 +262,12 @@ def plan(
                 f"{settings.n_paths:,} futures, seed {settings.seed}; simulated over solved value "
                 f"{made.value_share_simulated:.4f} (about 1)"
             )
+            if made.proof is not None:
+                terms = ", ".join(f"{name} {value:.3%}" for name, value in made.proof.terms)
+                errors.print(
+                    f"gap {made.proof.gap_share:.3%} of savings, standard error "
+                    f"{made.proof.gap_standard_error:.3%}: {terms}"
+                )
         out = _output()
         out.print(plan_summary(made))
         for path in contents:

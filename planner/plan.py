@@ -541,6 +541,8 @@ def _notes(
         person.life_table: life_table_of(household, person) for person in household.people
     }.values():
         notes.append(f"Life table {table.name}: {table.title}; {table.publisher}; {table.source}.")
+    if (problem.minimum_share > 0).any() and rules.minimum_distribution_due:
+        notes.append(f"The least that must be taken is due {rules.minimum_distribution_due}.")
     notes += [
         f"Tax this year ({tax:,.2f}) is by the actual bands, with the gains realised by what is sold and the "
         f"income paid out in taxable accounts. Later years use a planning tax ({planning:,.2f} for this "

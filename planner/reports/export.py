@@ -87,6 +87,7 @@ def results_json(plan: Plan) -> Json:
             "gap_money": money(proof.gap_money) if proof else None,
             "gap_share": share(proof.gap_share) if proof else None,
             "gap_standard_error": share(proof.gap_standard_error) if proof else None,
+            "gap_terms": {name: share(value) for name, value in proof.terms} if proof else None,
             "simulated_over_solved": share(plan.value_share_simulated),
         },
         "schedule": [

@@ -78,7 +78,8 @@ def plan_summary(plan: Plan) -> Group:
     if plan.level_spending is not None:
         table.add_row("Worth a steady income of", money.about(plan.level_spending))
     if plan.proof is not None:
-        table.add_row("From the best possible, at most", percent(plan.proof.gap_share, 2) + " of savings")
+        share = f"{percent(plan.proof.gap_share, 2)} of savings"
+        table.add_row("From the best possible, at most", f"{money.about(plan.proof.gap_money)}, {share}")
     bills = 1 - plan.strategies[0].chance_below_essential
     table.add_row("Futures tested in which bills are always paid", percent(bills))
     return Group(table)
