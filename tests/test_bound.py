@@ -8,7 +8,9 @@ from __future__ import annotations
 
 from dataclasses import replace
 from functools import cache
+from pathlib import Path
 
+import client_generator
 import numpy as np
 import pytest
 from builders import couple_problem, plain_problem, single_problem
@@ -33,8 +35,10 @@ from planner.outcomes import path_utilities
 from planner.piecewise import PiecewiseLinear
 from planner.preferences import EstateUtility, SpendingUtility
 from planner.problem import Decision, Problem, State
+from planner.problem_building import build_problem
 from planner.rules import AsAsked, ConstantPercentage, rules_for
 from planner.simulation import draw_scenarios, simulate
+from planner.workbook.reading import read_workbook
 
 COARSE = SolverSettings(10, 12, 8, 40)
 """Prices need not be good here, and solving is most of the time."""
@@ -413,3 +417,18 @@ def test_an_estate_that_takes_nearly_the_whole_limit_in_one_portfolio_alone() ->
     problem = replace(base, gross=gross, estate=estate, heirs_tax_rate=0.2, **chances)
     gap = prove(problem, solve(problem, COARSE), 300, np.random.default_rng(1))
     assert gap.terms.min() >= -1e-13 * np.abs(gap.bound).max()  # rounding: 3e-17 seen
+
+
+@pytest.mark.parametrize("number", [63, 151])
+def test_generated_households_that_broke_the_proof(number: int, tmp_path: Path) -> None:
+    """63: the price of tax-free, and with it that of cash, fell to nothing; 151: savings above every grid.
+
+    With the seed of `planner plan`, which met both in a list of 500 households.
+    """
+    workbook = tmp_path / "client.xlsx"
+    client_generator.write_workbook(client_generator.household(7, number), workbook)
+    problem = build_problem(read_workbook(workbook).household)
+    gap = prove(problem, solve(problem), 300, np.random.default_rng([20260101, 1]))
+    assert np.isfinite(gap.terms).all()
+    # Rounding of sums of terms of the size of the value.
+    assert gap.terms.min() >= -1e-9 * np.abs(gap.value).max()

@@ -315,7 +315,8 @@ class _Proof:
         in_step = STEADY * start / raw[:, TAXABLE]
         holds = binding & ~little[:, TAX_DEFERRED]
         deferred = np.where(holds, np.minimum(deferred, in_step), deferred)
-        usual = np.where(little[:, TAX_DEFERRED], 1.0, deferred)
+        # A tenth at least: tax-free caps the price of cash, which must not fall to nothing.
+        usual = np.where(little[:, TAX_DEFERRED], 1.0, np.maximum(deferred, 0.1))
         free = expect.factor(TAX_FREE, m3, estate)
         free = np.where(little[:, TAX_FREE], np.minimum(free, usual), free)
 

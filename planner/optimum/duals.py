@@ -215,6 +215,7 @@ class YearChoice:
     def _best_spending(self, price: FloatArray) -> FloatArray:
         """Max over c in [-(one-off cost that cannot be met), ceiling n] of n f(c/n) - l c."""
         problem, utility = self.problem, self.problem.utility
+        price = np.maximum(price, 1e-300)  # at no price at all spending would be infinite
         need = problem.need[self.t, self.h]
         kept = float(np.min(self.tax.x - self.tax.y))
         least = min(0.0, float(problem.income[self.t, self.h]) + min(kept, 0.0))

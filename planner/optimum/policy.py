@@ -112,8 +112,10 @@ class OptimalPolicy:
             spending[here] = read.spending
             withdraw[here], convert[here], y = settle(problem, t, h, x, read.gross, read.spending)
             corner, weight = self._corners(y)
-            choice = (self.portfolio[t, h].ravel()[corner] * weight).sum(axis=0)
-            portfolio[here] = np.rint(choice).astype(np.int64)
+            around = self.portfolio[t, h].ravel()[corner]
+            choice = np.rint((around * weight).sum(axis=0)).astype(np.int64)
+            # Beyond the last node weights are below 0 and above 1.
+            portfolio[here] = np.clip(choice, around.min(axis=0), around.max(axis=0))
         return Decision(withdraw, convert, spending, portfolio, np.zeros((n, 0)))
 
     def read(self, t: int, h: int, balances: FloatArray) -> Reading:
