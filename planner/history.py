@@ -218,4 +218,4 @@ def in_bootstrapped_years(solved: Solved, settings: PlanSettings, mean_block: fl
     )
     paths = simulate(problem, solved.policy, scenarios)
     yardstick = Yardstick(outcomes.path_utilities(problem, paths), solved.yardstick.value_at_scale)
-    return replace(solved, scenarios=scenarios, paths=paths, late=None, yardstick=yardstick)
+    return replace(solved, scenarios=scenarios, paths=paths, late=None, late_paths=None, yardstick=yardstick)

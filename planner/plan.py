@@ -31,18 +31,19 @@ from planner.projection import (
     chances_alive,
     decide_at,
     example_futures,
-    late_years,
+    late_scenarios,
     lookup,
     next_opening,
     no_change_band,
     schedule,
+    simulate_with_late,
     strategy_result,
 )
 from planner.proof import proof
 from planner.rule_terms import RuleSettings
 from planner.rules import RULES, Rule, rules_for
 from planner.scenarios import plan_what_ifs
-from planner.simulation import Paths, Scenarios, draw_scenarios, simulate
+from planner.simulation import Paths, Scenarios, draw_scenarios
 from planner.stresses import stresses
 from planner.taxes import TaxRules
 from planner.workbook.reading import ReadWorkbook
@@ -80,7 +81,7 @@ class PlanSettings:
     rules : tuple of str or None
         Keys of the rules to compare with; None = all.
     late_years : bool
-        Also simulate the years that few lives reach (see `projection.late_years`); without, their
+        Also simulate the years that few lives reach (see `projection.late_scenarios`); without, their
         percentiles may be missing (NaN).
     rule_parameters : tuple of (key, ((parameter, value), ...))
         Set for this run, over those of the workbook.
@@ -89,7 +90,7 @@ class PlanSettings:
     """
 
     n_paths: int = 20_000
-    n_what_if_paths: int = 3_000
+    n_what_if_paths: int = 2_000
     n_proof_paths: int = 300
     seed: int = 20260101
     solver: SolverSettings | None = None
@@ -104,14 +105,18 @@ class PlanSettings:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Solved:
-    """A household's problem, its optimum, the drawn futures and what the optimum did in them."""
+    """A household's problem, its optimum, the drawn futures and what the optimum did in them.
+
+    `late` are further futures for the years that few lives reach, None where none are needed.
+    """
 
     household: Household
     problem: Problem
     policy: OptimalPolicy
     scenarios: Scenarios
     paths: Paths
-    late: Paths | None
+    late: Scenarios | None
+    late_paths: Paths | None
     yardstick: Yardstick
 
 
@@ -135,11 +140,11 @@ def _with_paths(
     household: Household, problem: Problem, policy: OptimalPolicy, settings: PlanSettings
 ) -> Solved:
     scenarios = draw_scenarios(problem, settings.n_paths, np.random.default_rng(settings.seed))
-    paths = simulate(problem, policy, scenarios)
+    late = late_scenarios(problem, scenarios, settings.seed) if settings.late_years else None
+    paths, late_paths = simulate_with_late(problem, policy, scenarios, late)
 
     yardstick = Yardstick(outcomes.path_utilities(problem, paths), policy.value_at_scale(problem.opening))
-    late = late_years(problem, policy, paths, settings.seed) if settings.late_years else None
-    return Solved(household, problem, policy, scenarios, paths, late, yardstick)
+    return Solved(household, problem, policy, scenarios, paths, late, late_paths, yardstick)
 
 
 def compare_strategies(
@@ -159,17 +164,17 @@ Job = Callable[[], StrategyResult]
 
 
 def _strategy_jobs(solved: Solved, settings: PlanSettings) -> list[Job]:
-    measured = (solved.problem, solved.policy, PLAN_KEY, solved.paths, solved.late, solved.yardstick)
+    measured = (solved.problem, solved.policy, PLAN_KEY, solved.paths, solved.late_paths, solved.yardstick)
     rules = chosen_rules(solved, settings)
     return [
         partial(strategy_result, *measured),
-        *(partial(_simulated, solved, rule, rule.key, settings) for rule in rules),
+        *(partial(_simulated, solved, rule, rule.key) for rule in rules),
     ]
 
 
-def _banded_job(solved: Solved, settings: PlanSettings) -> Job:
+def _banded_job(solved: Solved) -> Job:
     banded = KeepWithinBand(solved.policy, NO_CHANGE_TOLERANCE)
-    return partial(_simulated, solved, banded, banded.key, settings)
+    return partial(_simulated, solved, banded, banded.key)
 
 
 def _in_turn(jobs: Sequence[Job], progress: Callable[[float], None] | None) -> tuple[StrategyResult, ...]:
@@ -202,13 +207,12 @@ def strategies_in(
     """`compare_strategies`, with the band of no change after the optimum where all rules are asked for."""
     jobs = _strategy_jobs(solved, settings)
     if settings.rules is None:
-        jobs.insert(1, _banded_job(solved, settings))
+        jobs.insert(1, _banded_job(solved))
     return _in_turn(jobs, progress)
 
 
-def _simulated(solved: Solved, policy: Policy, key: str, settings: PlanSettings) -> StrategyResult:
-    paths = simulate(solved.problem, policy, solved.scenarios)
-    late = late_years(solved.problem, policy, paths, settings.seed) if settings.late_years else None
+def _simulated(solved: Solved, policy: Policy, key: str) -> StrategyResult:
+    paths, late = simulate_with_late(solved.problem, policy, solved.scenarios, solved.late)
     result = strategy_result(solved.problem, policy, key, paths, late, solved.yardstick)
     return replace(result, reason=outcomes.main_loss(solved.problem, solved.paths, paths))
 
@@ -300,14 +304,14 @@ def make_plan(
             solved = _with_paths(household, problem, policy, settings)
             (proved,) = proving.results()
         paths = solved.paths
-        jobs = [_banded_job(solved, settings), *_strategy_jobs(solved, settings)]
+        jobs = [_banded_job(solved), *_strategy_jobs(solved, settings)]
         with shared(jobs) as rest:
             facts = first_year(household)
             now = first_choice(solved)
             instructions = this_year(household, problem, facts, now)
             middle = next_opening(problem, paths)
             plan_year = household.plan_date.year
-            rows = schedule(problem, paths, solved.late, plan_year)
+            rows = schedule(problem, paths, solved.late_paths, plan_year)
             banded, *others = rest.results(
                 lambda number: report(end_base * (0.5 + 0.5 * number / len(jobs)), "testing rules of thumb")
             )
@@ -474,7 +478,7 @@ def _what_if_jobs(
 def _optimum_alone(household: Household, settings: PlanSettings) -> StrategyResult:
     solved = solve_household(household, settings)
     return strategy_result(
-        solved.problem, solved.policy, PLAN_KEY, solved.paths, solved.late, solved.yardstick
+        solved.problem, solved.policy, PLAN_KEY, solved.paths, solved.late_paths, solved.yardstick
     )
 
 

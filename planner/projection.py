@@ -18,7 +18,7 @@ from planner.problem import TAX_DEFERRED, IntArray, Policy, Problem, State, over
 from planner.simulation import Paths, Scenarios, draw_scenarios, simulate
 
 ENOUGH_PATHS = 200
-"""Fewer living paths than this make a poor percentile; see `late_years`."""
+"""Fewer living paths than this make a poor percentile; see `late_scenarios`."""
 
 LATE_PATHS = 500
 """Paths drawn for the years that few lives reach; all of them live to the end."""
@@ -88,17 +88,30 @@ def given_a_long_life(problem: Problem) -> Problem:
     return replace(problem, transition=transition, death=1 - transition.sum(axis=2))
 
 
-def late_years(problem: Problem, policy: Policy, paths: Paths, seed: int) -> Paths | None:
+def late_scenarios(problem: Problem, scenarios: Scenarios, seed: int) -> Scenarios | None:
     """Paths for ages that few drawn lives reach: lives drawn given that someone reaches the end.
 
     None where every year has `ENOUGH_PATHS` living paths. At such ages almost every household is a
     lone survivor, so that the condition hardly changes who is alive.
     """
-    if (paths.alive.sum(axis=0) >= ENOUGH_PATHS).all():
+    if ((scenarios.status[:, :-1] < problem.n_statuses).sum(axis=0) >= ENOUGH_PATHS).all():
         return None
     long_lived = given_a_long_life(problem)
-    scenarios = draw_scenarios(long_lived, LATE_PATHS, np.random.default_rng([seed, 1]))
-    return simulate(problem, policy, scenarios)
+    return draw_scenarios(long_lived, LATE_PATHS, np.random.default_rng([seed, 1]))
+
+
+def simulate_with_late(
+    problem: Problem, policy: Policy, scenarios: Scenarios, late: Scenarios | None
+) -> tuple[Paths, Paths | None]:
+    """Paths of the scenarios and, if any, of late years, carried along together.
+
+    A year costs some hundred calls however few paths there are. Long lives come first, so that the
+    whole stays sorted.
+    """
+    if late is None:
+        return simulate(problem, policy, scenarios), None
+    paths = simulate(problem, policy, late.followed_by(scenarios))
+    return paths.part(slice(late.n_paths, None)), paths.part(slice(late.n_paths))
 
 
 @dataclass(frozen=True, slots=True, eq=False)

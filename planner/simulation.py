@@ -5,7 +5,7 @@ Drawn years are an argument, so differences between strategies are not noise bet
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from typing import Literal
 
 import numpy as np
@@ -70,6 +70,14 @@ class Scenarios:
     def n_years(self) -> int:
         """Number of years."""
         return self.status.shape[1] - 1
+
+    def followed_by(self, other: Scenarios) -> Scenarios:
+        """These paths, then those of `other`: same years, same source of returns, inflation as expected."""
+        if self.normal is None or other.normal is None or self.inflation is not None:
+            raise ValueError("only drawn paths of the continuous law can be put together")
+        return Scenarios(
+            np.concatenate([self.status, other.status]), normal=np.concatenate([self.normal, other.normal])
+        )
 
     def returns(self, problem: Problem, t: int, path: IntArray | slice, portfolio: IntArray) -> FloatArray:
         """Gross real return of year t on the given paths for the portfolio each holds; (len(path),)."""
@@ -202,6 +210,10 @@ class Paths:
     def n_years(self) -> int:
         """Number of years."""
         return self.status.shape[1]
+
+    def part(self, paths: slice) -> Paths:
+        """Some of the paths, without copying."""
+        return Paths(**{field.name: getattr(self, field.name)[paths] for field in fields(self)})
 
 
 def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
