@@ -198,23 +198,32 @@ def wealth_cost(value_at_scale: ValueAtScale, difference: float, wealth: float) 
     if difference == 0 or wealth <= 0:
         return 0.0
     low, high = (0.0, 1.0) if difference < 0 else (1.0, 2.0)
-    target = None
-    for _ in range(SECTIONINGS):
+    scales = np.linspace(low, high, SECTIONS + 1)
+    values = value_at_scale(scales)
+    target = float(values[-1] if difference < 0 else values[0]) + difference
+    if values[0] >= target:
+        return (1 - low) * wealth
+    if values[-1] <= target:
+        return (1 - high) * wealth
+    low, high, _ = _section(scales, values, target)
+    for _ in range(SECTIONINGS - 1):
         scales = np.linspace(low, high, SECTIONS + 1)
-        values = value_at_scale(scales)
-        if target is None:
-            target = float(values[-1] if difference < 0 else values[0]) + difference
-            if values[0] >= target:
-                return (1 - low) * wealth
-            if values[-1] <= target:
-                return (1 - high) * wealth
-        after = int(np.argmax(values >= target))
-        low, high = float(scales[after - 1]), float(scales[after])
-        below, above = float(values[after - 1]), float(values[after])
+        low, high, share = _section(scales, value_at_scale(scales), target)
     # V_0 is steep near 0, but a straight line over a two-millionth of it.
-    assert target is not None
-    scale = low + (high - low) * (target - below) / (above - below)
-    return (1 - scale) * wealth
+    return (1 - (low + share * (high - low))) * wealth
+
+
+def _section(scales: FloatArray, values: FloatArray, target: float) -> tuple[float, float, float]:
+    """First section in which values reach the target, and where on it, as a share of a straight line.
+
+    Values at the ends may differ by rounding from what they were among other scales, so the target may
+    seem to lie at or beyond an end.
+    """
+    reached = np.flatnonzero(values >= target)
+    after = max(1, int(reached[0])) if reached.size else values.size - 1
+    below, above = float(values[after - 1]), float(values[after])
+    share = (target - below) / (above - below) if above > below else 0.0
+    return float(scales[after - 1]), float(scales[after]), min(max(share, 0.0), 1.0)
 
 
 BILLS, TOO_LITTLE_EARLY, TOO_LITTLE_LATE, LEAVES_LESS = (

@@ -128,6 +128,17 @@ def test_wealth_cost_of_a_gain_that_no_wealth_gives_is_bounded() -> None:
     assert wealth_cost(lambda s: np.minimum(s, 1.0), 0.01, 300_000.0) == -300_000.0
 
 
+def test_wealth_cost_bears_values_that_differ_by_rounding_between_calls() -> None:
+    """The ends of a section are valued again among other scales, and may then miss the target."""
+    signs = iter((1.0, -1.0, 1.0))
+
+    def value(scale: np.ndarray) -> np.ndarray:
+        return np.asarray(scale * (1.0 + 1e-13 * next(signs)))
+
+    # 1e-13 of value is 1e-13 of wealth here.
+    assert wealth_cost(value, -0.25, 300_000.0) == pytest.approx(75_000.0, abs=1e-6)
+
+
 def test_wealth_cost_without_wealth_is_nothing() -> None:
     assert wealth_cost(lambda s: s, -1.0, 0.0) == 0.0
 

@@ -158,3 +158,17 @@ def test_rate_and_room():
     assert rate_and_room(tax, 12_000.0) == (pytest.approx(0.2), pytest.approx(3_000.0))
     assert rate_and_room(tax, 15_000.0) == (pytest.approx(0.2), 0.0)
     assert rate_and_room(tax, 15_001.0) == (pytest.approx(0.2), float("inf"))
+
+
+def test_two_kinks_a_millionth_apart_are_not_both_lost() -> None:
+    """Two people whose allowances end 6e-6 apart: each kink alone may go, the turn of both may not.
+
+    Seen as a couple's tax that charged the top rate from the first unit on.
+    """
+    starts, rates = [0.0, 15_750.0, 27_675.0, 642_100.0], [0.0, 0.1, 0.12, 0.41]
+    first = progressive(starts, rates)
+    second = progressive([max(0.0, start - 5.668648820995088e-06) for start in starts], rates)
+    both = total((first * 0.5, second * 0.5))
+    for place in (1e-3, 15_000.0, 20_000.0, 300_000.0, 1e6):
+        # The kinks that are merged lie 6e-6 apart, and no rate is above one.
+        assert float(both(place)) == pytest.approx(float(first(place)), abs=1e-5)

@@ -196,20 +196,6 @@ def test_composed_federal_tax_is_the_statute_formula(benefits, other, ages, year
     assert_allclose(composed(withdrawals), direct, rtol=0, atol=ROUNDING)
 
 
-def test_kinks_of_two_people_a_millionth_apart_are_not_both_lost() -> None:
-    rules = load("us-federal-2025")
-    first = person(55, (PENSION, 0.0), other=0.0)
-    second = person(55, (PENSION, 0.0), other=2.834324410497544e-06)
-    people = couple(first, second)
-    composed = tax_of(rules, people, rules.year, together=False, extra_rate=0.04)
-    for withdrawal in (0.00137, 20_000.0, 90_000.0, 1_500_000.0):
-        direct = rules.first_year_tax(
-            people, withdrawal=withdrawal, law_year=rules.year, together=False, extra_rate=0.04
-        )
-        # The kinks that are merged lie 6e-6 apart, and no rate is above one.
-        assert float(composed(withdrawal)) == pytest.approx(direct, abs=1e-4)
-
-
 # --- laws, for every set that is shipped ------------------------------------------------------
 
 SURCHARGED = own(

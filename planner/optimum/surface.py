@@ -12,6 +12,8 @@ from planner.problem import IntArray
 # Hermite weights of values and of slopes, each (2, ...): at the left and at the right node.
 Side = tuple[FloatArray, FloatArray]
 Basis = tuple[Side, Side]  # and their derivatives
+# Money, tax-deferred, tax-free node, tax-free (None: at the node).
+Points = tuple[FloatArray, FloatArray, IntArray, FloatArray | None]
 
 
 BLOCK = 2048  # points at a time, so that their numbers stay in the processor's cache
@@ -67,45 +69,31 @@ class Surface:
         `free` None: at tax-free node `node3`. The slope along tax-free (at given money) is found only
         where conversions are allowed; nothing else needs it.
         """
-        result = np.zeros((4, cash.size))
-        self._fill(cash, deferred, node3, free, result)
-        return result[0], result[1], result[2], result[3]
+        level, along_cash, along_deferred, along_free = self._filled(4, (cash, deferred, node3, free))
+        return level, along_cash, along_deferred, along_free
 
     def level(
         self, cash: FloatArray, deferred: FloatArray, node3: IntArray, free: FloatArray | None
     ) -> FloatArray:
         """The level alone, as `__call__` gives it, for about two thirds of the work."""
-        result = np.zeros((1, cash.size))
-        self._fill(cash, deferred, node3, free, result)
-        return result[0]
+        return self._filled(1, (cash, deferred, node3, free))[0]
 
-    def _fill(
-        self,
-        cash: FloatArray,
-        deferred: FloatArray,
-        node3: IntArray,
-        free: FloatArray | None,
-        result: FloatArray,
-    ) -> None:
+    def _filled(self, n_rows: int, points: Points) -> FloatArray:
+        cash, deferred, node3, free = points
+        result = np.zeros((n_rows, cash.size))
         for start in range(0, cash.size, BLOCK):
             part = slice(start, start + BLOCK)
-            self._block(
-                cash[part], deferred[part], node3[part], None if free is None else free[part], result[:, part]
-            )
+            free_part = None if free is None else free[part]
+            self._block((cash[part], deferred[part], node3[part], free_part), result[:, part])
+        return result
 
-    def _block(
-        self,
-        cash: FloatArray,
-        deferred: FloatArray,
-        node3: IntArray,
-        free: FloatArray | None,
-        result: FloatArray,
-    ) -> None:
+    def _block(self, points: Points, result: FloatArray) -> None:
         """Fill the level alone (1, n), or with its slopes (4, n).
 
         One axis after another on arrays (number, tax-deferred side, money side, n): few calls on
         larger arrays, because a call of numpy costs as much as the arithmetic on a thousand points.
         """
+        cash, deferred, node3, free = points
         grid = self.table.grid
         n2, n_cash, n3 = self.shape
         with_slopes = result.shape[0] > 1
