@@ -106,20 +106,55 @@ class SpendingUtility:
     def marginal(self, x: ArrayLike) -> FloatArray:
         """f'(x), the right derivative at E and the left one at the floor; any shape."""
         x = np.asarray(x, dtype=np.float64)
-        u = self.power_marginal(np.maximum(x, self.floor))
-        return np.asarray(np.where(x < self.essential, self.shortfall_weight * u, u))
+        return self._steeper_below(x, self.power_marginal(np.maximum(x, self.floor)))
+
+    def value_and_marginal(self, x: ArrayLike) -> tuple[FloatArray, FloatArray]:
+        """f(x) and f'(x) as `value` and `marginal` give them, with one power for both; any shape."""
+        x = np.asarray(x, dtype=np.float64)
+        held = np.maximum(x, self.floor)
+        slope = self.power_marginal(held)
+        # U = x U' / (1 - gamma).
+        level = self.power(held) if self.risk_aversion == 1 else slope * held / (1 - self.risk_aversion)
+        level += self._floor_slope * np.minimum(x - self.floor, 0.0)
+        if self.shortfall_weight != 1:
+            level += (self.shortfall_weight - 1) * np.minimum(level - self._scalar(self.essential), 0.0)
+        return np.asarray(level), self._steeper_below(x, slope)
+
+    def _steeper_below(self, x: FloatArray, slope: FloatArray) -> FloatArray:
+        if self.shortfall_weight == 1:
+            return slope
+        return np.where(x < self.essential, self.shortfall_weight * slope, slope)
 
     def inverse(self, v: ArrayLike) -> FloatArray:
         """f^-1(v): the level of spending worth v, closed form in three pieces; any shape.
 
         For gamma > 1 every v of an average of utilities is below 0, where the inverse exists.
         """
-        v = np.asarray(v, dtype=np.float64)
-        kappa, top = self.shortfall_weight, self._scalar(self.essential)
-        bottom = self._scalar(self.floor)
-        u = np.where(v >= top, v, (v + (kappa - 1) * top) / kappa)
-        line = self.floor + (u - bottom) / self._floor_slope
-        return np.asarray(np.where(u >= bottom, self.power_inverse(np.maximum(u, bottom)), line))
+        u = np.asarray(v, dtype=np.float64)
+        kappa, bottom = self.shortfall_weight, self._scalar(self.floor)
+        if kappa != 1:
+            top = self._scalar(self.essential)
+            u = np.where(u >= top, u, (u + (kappa - 1) * top) / kappa)
+        below = np.minimum(u - bottom, 0.0) / self._floor_slope  # on the straight line
+        return np.asarray(self.power_inverse(np.maximum(u, bottom)) + below)
+
+    def inverse_and_marginal(self, v: ArrayLike) -> tuple[FloatArray, FloatArray]:
+        """Return f^-1(v) and f' there, with one power for both; any shape.
+
+        Raises
+        ------
+        ValueError
+            There is a kink (the shortfall weight is not 1).
+        """
+        if self.shortfall_weight != 1:
+            raise ValueError("the slope at a given value is found only where there is no kink")
+        x = self.inverse(v)
+        if self.risk_aversion == 1:
+            return x, np.asarray(1.0 / np.maximum(x, self.floor))
+        # U' = (1 - gamma) U / x.
+        slope = (1 - self.risk_aversion) * np.maximum(v, self._scalar(self.floor))
+        slope /= np.maximum(x, self.floor)
+        return x, np.asarray(slope)
 
     def inverse_marginal(self, m: ArrayLike) -> FloatArray:
         """Spending x that maximises f(x) - m x for m > 0: E where E's kink holds it; any shape.

@@ -35,6 +35,30 @@ def test_inverse_is_the_inverse(utility: SpendingUtility, x: float) -> None:
 
 
 @settings(deadline=None, max_examples=200)
+@given(utilities, amounts)
+def test_value_and_slope_at_once(utility: SpendingUtility, x: float) -> None:
+    """One power in place of two: a few roundings of the larger of utility and its line."""
+    both = utility.value_and_marginal(x)
+    allowed = 1e-13 * (abs(float(utility.value(utility.floor))) + abs(float(utility.value(x))) + 1e-300)
+    assert_allclose(both[0], utility.value(x), rtol=1e-13, atol=allowed)
+    assert_allclose(both[1], utility.marginal(x), rtol=1e-13)
+
+
+@settings(deadline=None, max_examples=200)
+@given(utilities, amounts)
+def test_slope_at_a_value(utility: SpendingUtility, x: float) -> None:
+    """At most gamma + 1 times the rounding of the place where the value is reached."""
+    if utility.shortfall_weight != 1:
+        with pytest.raises(ValueError, match="no kink"):
+            utility.inverse_and_marginal(utility.value(x))
+    smooth = SpendingUtility(utility.risk_aversion, 1.0, ESSENTIAL, utility.floor)
+    place, slope = smooth.inverse_and_marginal(smooth.value(x))
+    assert_allclose(place, smooth.inverse(smooth.value(x)), rtol=1e-14)
+    allowed = (smooth.risk_aversion + 1) * rounding(smooth, x) / max(x, smooth.floor) + 1e-13
+    assert_allclose(slope, smooth.marginal(x), rtol=allowed)
+
+
+@settings(deadline=None, max_examples=200)
 @given(utilities, amounts, amounts, st.floats(0, 1))
 def test_utility_is_increasing_and_concave(
     utility: SpendingUtility, a: float, b: float, share: float

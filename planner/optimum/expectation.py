@@ -80,17 +80,16 @@ def expected_value(
     its arrays then stay in the processor's cache.
     """
     n_portfolios, n_nodes = problem.gross.shape
-    value, slope = (np.zeros((n_portfolios, level.size)) for _ in range(2))
+    value, slope = np.zeros((2, n_portfolios, level.size))
     for p in range(n_portfolios):
         part = slice(p * n_nodes, (p + 1) * n_nodes)
         maps = tuple(m[part] for m in growth.maps)
         rows = tuple(r[part] for r in growth.cells)
-        moved = _moved(maps, rows, level)
-        value[p] = problem.node_weights @ smooth.value(moved)
+        worth, unit = smooth.value_and_marginal(_moved(maps, rows, level))
+        value[p] = problem.node_weights @ worth
         if level.shape[1] > 1:
-            slope2_moved = _moved(maps, None, slope2)
-            slope2_moved *= smooth.marginal(moved)
-            slope[p] = (problem.node_weights * problem.gross[p]) @ slope2_moved
+            unit *= _moved(maps, None, slope2)
+            slope[p] = (problem.node_weights * problem.gross[p]) @ unit
     shape = (n_portfolios, *level.shape)
     return value.reshape(shape), slope.reshape(shape)
 

@@ -142,104 +142,110 @@ def cash_table(
     weight : float
         A_V(t, h), the weight of this year's value.
     """
-    smooth = felicity.smooth
-    level, w = following.level, following.weight
-    n2, _, n3 = level.shape
+    smooth, w = felicity.smooth, following.weight
+    n2, n1, n3 = following.level.shape
     m = grid.nodes
     shape = (n2, m.size, n3)
+    worth, unit = smooth.value_and_marginal(following.level)
+    worth, unit = w * worth, w * unit
+    price2 = unit * following.slope2
 
-    price1 = w * smooth.marginal(level) * np.maximum(following.slope1, TINY_SLOPE)
-    if w == 0.0:
-        price1 = np.zeros_like(level)
-    spend1 = felicity.spend(price1)
-    knots1 = np.maximum.accumulate(spend1 + taxable[:, None], axis=1)
-    cash_nodes = m[:, None] - tax_free
-    index = _bracket(cash_nodes, knots1)
+    in_taxable = _Kept.of(following.level, following.slope1, following.slope2, unit, taxable, felicity)
+    cash = m[:, None] - tax_free
+    index = _bracket(m, in_taxable.knots + tax_free)
     if n3 > 1:
-        price3 = (
-            w * smooth.marginal(level[:, 0]) * np.maximum(following.slope3, TINY_SLOPE)
-            if w
-            else 0 * level[:, 0]
+        in_free = _Kept.of(
+            following.level[:, 0, :, None],
+            following.slope3[:, :, None],
+            following.slope2[:, 0, :, None],
+            unit[:, 0, :, None],
+            tax_free,
+            felicity,
         )
-        spend3 = felicity.spend(price3)
-        first_need = np.minimum(spend3, spend1[:, 0])[:, None, :]  # below it tax-free pays too
-    else:
-        price3 = spend3 = np.zeros((n2, n3))
-        first_need = np.full((n2, 1, n3), -np.inf)
-
-    cash = np.broadcast_to(cash_nodes, shape)
-    left_copy = np.zeros(m.size, dtype=bool)
-    left_copy[grid.kink] = True
+        # Below it tax-free pays too.
+        first_need = np.minimum(in_free.spend[:, :, 0], in_taxable.spend[:, 0])[:, None, :]
 
     # Cash pays everything and nothing is left of it: the household spends exactly the cash.
-    spending = np.array(cash)
-    later = np.broadcast_to(w * smooth.value(level[:, 0]) if w else 0 * level[:, 0], (n2, n3))[:, None, :]
-    later = np.array(np.broadcast_to(later, shape))
-    marginal = felicity.marginal(np.where(left_copy[None, :, None], cash * (1 - 1e-12) - 1e-300, cash))
-    price2 = w * smooth.marginal(level) * following.slope2 if w else np.zeros_like(level)
-    deferred = np.array(np.broadcast_to(price2[:, :1, :], shape))
+    choice = np.empty((4, *shape))
+    spending, marginal, later, deferred = choice
+    spending[:] = cash
+    marginal[:] = felicity.marginal(_left_of_kink(cash, grid))
+    later[:] = worth[:, :1]
+    deferred[:] = price2[:, :1]
 
     # Some cash is left in taxable.
-    some = np.nonzero(index >= 0)
-    if some[0].size:
-        j, k, i3 = some
-        c, lvl, price, at, share = _solve_along(
-            cash_nodes[k, i3],
-            index[some],
-            taxable,
-            (j, i3),
-            knots1,
-            spend1,
-            level,
-            following.slope1,
-            felicity,
-            w,
-        )
-        spending[some], marginal[some] = c, price
-        deferred[some] = _along(following.slope2, j, at, i3, share) * w * smooth.marginal(lvl)
-        later[some] = w * smooth.value(lvl) if w else 0.0
+    some = np.flatnonzero(index >= 0)
+    if some.size:
+        rows = (np.arange(n2) * n1 * n3)[:, None, None] + np.arange(n3)
+        row = np.broadcast_to(rows, shape).reshape(-1).take(some)
+        found = _keep_some(spending.take(some), index.take(some), row, in_taxable, felicity, w)
+        for numbers, new in zip(choice, found, strict=True):
+            numbers.reshape(-1)[some] = new
 
     # Cash is used up and tax-free pays the rest.
-    draw = np.nonzero((index < 0) & (cash < first_need))
-    if n3 > 1 and draw[0].size:
-        j, k, i3 = draw
-        total = cash_nodes[k, i3] + tax_free[i3]
-        knots3 = np.maximum.accumulate(spend3 + tax_free, axis=1)[:, :, None]
-        inside = (total[:, None] >= knots3[j, :, 0]).sum(axis=1) - 1
-        c = np.array(total)  # everything is spent where even tax-free runs out
-        price = felicity.marginal(np.where(left_copy[k], c * (1 - 1e-12) - 1e-300, c))
-        value = (w * smooth.value(level[:, 0, 0]) if w else 0 * level[:, 0, 0])[j]
-        other = price2[j, 0, 0]
-        held = np.nonzero(inside >= 0)[0]
+    if n3 > 1:
+        draw = np.flatnonzero((index < 0) & (cash < first_need))
+        j, at = draw // (m.size * n3), draw // n3 % m.size
+        total = m.take(at)
+        inside = (total[:, None] >= in_free.knots[j, :, 0]).sum(axis=1) - 1
+        # Everything is spent where even tax-free runs out.
+        price = felicity.marginal(_left_of_kink(m, grid)).take(at)
+        drawn = (total.copy(), price, worth[j, 0, 0], price2[j, 0, 0])
+        held = np.flatnonzero(inside >= 0)
         if held.size:
-            c[held], lvl, price[held], at, share = _solve_along(
-                total[held],
-                inside[held],
-                tax_free,
-                (j[held], np.zeros(held.size, dtype=np.int64)),
-                knots3,
-                spend3[:, :, None],
-                level[:, 0][:, :, None],
-                following.slope3[:, :, None],
-                felicity,
-                w,
-            )
-            value[held] = w * smooth.value(lvl) if w else 0.0
-            at_zero = following.slope2[:, 0, :, None]
-            zero = np.zeros(held.size, dtype=np.int64)
-            other[held] = _along(at_zero, j[held], at, zero, share) * w * smooth.marginal(lvl)
-        spending[draw], marginal[draw], later[draw], deferred[draw] = c, price, value, other
+            found = _keep_some(total[held], inside[held], j[held] * n3, in_free, felicity, w)
+            for numbers, new in zip(drawn, found, strict=True):
+                numbers[held] = new
+        for numbers, new in zip(choice, drawn, strict=True):
+            numbers.reshape(-1)[draw] = new
 
-    table = smooth.inverse((felicity.value(spending) + later) / weight)
-    unit = weight * smooth.marginal(table)
+    later += felicity.value(spending)
+    later /= weight
+    table, unit = smooth.inverse_and_marginal(later)
+    unit = weight * unit
     slope = np.minimum(marginal / unit, _steepest(table, m))
     return CashTable(grid, table, slope, deferred / unit, spending)
 
 
-def _along(values: FloatArray, j: IntArray, k: IntArray, other: IntArray, share: FloatArray) -> FloatArray:
-    """Linear between nodes k and k + 1 of axis 1, held at the last node beyond it."""
-    left = values[j, k, other]
-    return np.asarray(left + np.clip(share, 0.0, 1.0) * (values[j, k + 1, other] - left))
+@dataclass(frozen=True, slots=True, eq=False)
+class _Kept:
+    """What keeping money in one account is worth, at the account's nodes along axis 1.
+
+    Attributes
+    ----------
+    nodes : ndarray of shape (n,)
+    spend, knots : ndarray of shape (n2, n, n3)
+        Spending that leaves exactly the node, and the money that this takes (non-decreasing).
+    numbers : ndarray of shape (5, n2 n n3)
+        Level, its slopes along the account and along tax-deferred, spending and knots, flat.
+    """
+
+    nodes: FloatArray
+    spend: FloatArray
+    knots: FloatArray
+    numbers: FloatArray
+
+    @classmethod
+    def of(
+        cls,
+        level: FloatArray,
+        slope: FloatArray,
+        slope2: FloatArray,
+        unit: FloatArray,
+        nodes: FloatArray,
+        felicity: Felicity,
+    ) -> _Kept:
+        """From a continuation's level and slopes; `unit` is the utility of one unit of the level."""
+        spend = felicity.spend(unit * np.maximum(slope, TINY_SLOPE))
+        knots = np.maximum.accumulate(spend + nodes[:, None], axis=1)
+        return cls(nodes, spend, knots, np.stack([level, slope, slope2, spend, knots]).reshape(5, -1))
+
+
+def _left_of_kink(money: FloatArray, grid: CashGrid) -> FloatArray:
+    """Money (n_cash, ...), at the first copy of the doubled node a little less: the slope on its left."""
+    money = money.copy()
+    money[grid.kink] = money[grid.kink] * (1 - 1e-12) - 1e-300
+    return money
 
 
 def _steepest(level: FloatArray, nodes: FloatArray) -> FloatArray:
@@ -256,47 +262,54 @@ def _steepest(level: FloatArray, nodes: FloatArray) -> FloatArray:
 
 
 def _bracket(points: FloatArray, knots: FloatArray) -> IntArray:
-    """Last knot at or below each point: (m, n3), (n2, n, n3) -> (n2, m, n3); -1 where none."""
-    if knots.shape[0] == knots.shape[2] == 1:
-        return (np.searchsorted(knots[0, :, 0], points[:, 0], side="right") - 1)[None, :, None]
-    count = np.zeros((knots.shape[0], *points.shape), dtype=np.int64)
-    for i in range(knots.shape[1]):
-        count += points >= knots[:, i : i + 1]
-    return count - 1
+    """Last knot at or below each point: (m,), (n2, n, n3) -> (n2, m, n3); -1 where none.
+
+    Both increase along their axis: a knot is counted from the first point that reaches it.
+    """
+    n2, _, n3 = knots.shape
+    if n2 == n3 == 1:
+        return (np.searchsorted(knots[0, :, 0], points, side="right") - 1)[None, :, None]
+    first = np.searchsorted(points, knots, side="left")
+    first *= n3
+    first += (np.arange(n2) * (points.size + 1) * n3)[:, None, None] + np.arange(n3)
+    count = np.bincount(first.ravel(), minlength=n2 * (points.size + 1) * n3)
+    return count.reshape(n2, points.size + 1, n3)[:, :-1].cumsum(axis=1) - 1
 
 
-def _solve_along(
+def _keep_some(
     money: FloatArray,
     index: IntArray,
-    nodes: FloatArray,
-    place: tuple[IntArray, IntArray],
-    knots: FloatArray,
-    spend: FloatArray,
-    level: FloatArray,
-    slope: FloatArray,
+    row: IntArray,
+    kept: _Kept,
     felicity: Felicity,
     weight: float,
-) -> tuple[FloatArray, FloatArray, FloatArray, IntArray, FloatArray]:
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """Split money into spending and what is kept in one account: c + y = money.
 
-    Newton on y + c(y) = money, started from the endogenous knots of
-    the row `place` = (j, l), knots[j, i, l]. Returns spending, level of the continuation and its price.
+    Newton on y + c(y) = money, started from the endogenous knot `index` of the row whose first
+    number lies at `row`. Each (n,): spending, price of money, worth of what follows, and its slope
+    along tax-deferred.
     """
-    j, other = place
+    nodes, stride = kept.nodes, kept.spend.shape[2]
     k = np.minimum(index, nodes.size - 2)
-    left, right = nodes[k], nodes[k + 1]
-    at0, at1 = knots[j, k, other], knots[j, k + 1, other]
-    rise = np.maximum(at1 - at0, 1e-9 * (right - left))
-    y = left + (right - left) * np.maximum(money - at0, 0.0) / rise
-    slope_of_spending = np.maximum((spend[j, k + 1, other] - spend[j, k, other]) / (right - left), 0.0)
-    corners = (level[j, k, other], level[j, k + 1, other], slope[j, k, other], slope[j, k + 1, other])
-    last = index >= nodes.size - 1
-    highest = np.where(last, np.inf, right)
-    for step in range(NEWTON_STEPS + 1):
-        lvl, rate = hermite(y, left, right, corners)
-        price = weight * felicity.smooth.marginal(lvl) * np.maximum(rate, TINY_SLOPE)
-        if step < NEWTON_STEPS:
-            excess = y + np.minimum(felicity.spend(price), money) - money
-            y = np.clip(y - excess / (1.0 + slope_of_spending), left, highest)
+    at = row + k * stride
+    level0, slope0, other0, spend0, knot0 = kept.numbers.take(at, axis=1)
+    level1, slope1, other1, spend1, knot1 = kept.numbers.take(at + stride, axis=1)
+    left, right = nodes.take(k), nodes.take(k + 1)
+    width = right - left
+    y = left + width * np.maximum(money - knot0, 0.0) / np.maximum(knot1 - knot0, 1e-9 * width)
+    slope_of_spending = np.maximum((spend1 - spend0) / width, 0.0)
+    corners = (level0, level1, slope0, slope1)
+    highest = np.where(index >= nodes.size - 1, np.inf, right)
+    for _ in range(NEWTON_STEPS):
+        level, rate = hermite(y, left, right, corners)
+        price = weight * felicity.smooth.marginal(level) * np.maximum(rate, TINY_SLOPE)
+        excess = y + np.minimum(felicity.spend(price), money) - money
+        y = np.clip(y - excess / (1.0 + slope_of_spending), left, highest)
+    level, rate = hermite(y, left, right, corners)
+    worth, unit = felicity.smooth.value_and_marginal(level)
+    unit *= weight
+    price = unit * np.maximum(rate, TINY_SLOPE)
     y = np.minimum(y, np.maximum(money, 0.0))
-    return money - y, lvl, price, k, (y - left) / (right - left)
+    share = np.clip((y - left) / width, 0.0, 1.0)
+    return money - y, price, weight * worth, unit * (other0 + share * (other1 - other0))
