@@ -46,13 +46,13 @@ class PiecewiseLinear:
     def __call__(self, at: ArrayLike) -> FloatArray:
         """Values at points ``at >= 0`` (any shape)."""
         points = np.asarray(at, dtype=np.float64)
-        left = np.clip(np.searchsorted(self.x, points, side="left") - 1, 0, self.x.size - 1)
+        left = np.maximum(np.searchsorted(self.x, points, side="left") - 1, 0)
         return self.y[left] + self.slopes[left] * (points - self.x[left])
 
     def limit_from_right(self, at: ArrayLike) -> FloatArray:
         """Limits from the right at points ``at >= 0`` (any shape); differ from values at jumps."""
         points = np.asarray(at, dtype=np.float64)
-        right = np.clip(np.searchsorted(self.x, points, side="right") - 1, 0, self.x.size - 1)
+        right = np.maximum(np.searchsorted(self.x, points, side="right") - 1, 0)
         return self.y[right] + self.slopes[right] * (points - self.x[right])
 
     @property

@@ -105,26 +105,29 @@ def derivative_matrix(nodes: FloatArray) -> FloatArray:
         return matrix
     matrix[0, :2] = np.array([-1.0, 1.0]) / nodes[1]
     width, first = _stencil(n)
-    for i in range(1, n):
-        cells = {min(max(i - 1, first), n - 2), min(i, n - 2)}
-        for cell in cells:
-            start = int(np.clip(cell - (width // 2 - 1), first, n - width))
-            columns = np.arange(start, start + width)
-            matrix[i, columns] += _node_slopes(nodes[columns], i - start) / len(cells)
+    at = np.arange(1, n)
+    # The cells on either side of each node; at an end, and beside the first cell, twice the same.
+    for cell in (np.maximum(at - 1, min(first, n - 2)), np.minimum(at, n - 2)):
+        start = np.minimum(np.maximum(cell - (width // 2 - 1), first), n - width)
+        columns = start[:, None] + np.arange(width)
+        matrix[at[:, None], columns] += 0.5 * _node_slopes(nodes[columns], at - start)
     return matrix
 
 
-def _node_slopes(local: FloatArray, at: int) -> FloatArray:
-    """Weights of the derivative of the Lagrange polynomial at its own node `at`."""
-    width = local.size
-    weights = np.zeros(width)
-    for k in range(width):
-        if k == at:
-            weights[k] = sum(1.0 / (local[at] - local[j]) for j in range(width) if j != at)
-            continue
-        rest = [j for j in range(width) if j not in (k, at)]
-        top = np.prod([local[at] - local[j] for j in rest])
-        weights[k] = top / np.prod([local[k] - local[j] for j in range(width) if j != k])
+def _node_slopes(local: FloatArray, at: IntArray) -> FloatArray:
+    """Weights of the derivative of the Lagrange polynomial on nodes (m, width) at its node `at` (m,).
+
+    With barycentric weights b: (b_k / b_i) / (x_i - x_k) off the node, minus their sum on it
+    (Berrut & Trefethen 2004, SIAM Review 46(3) 501-517, section 9.3).
+    """
+    rows = np.arange(at.size)
+    gaps = local[:, :, None] - local[:, None, :]
+    diagonal = np.arange(local.shape[1])
+    gaps[:, diagonal, diagonal] = 1.0
+    barycentric = 1.0 / gaps.prod(axis=2)
+    weights = barycentric / barycentric[rows, at][:, None] / gaps[rows, at]
+    weights[rows, at] = 0.0
+    weights[rows, at] = -weights.sum(axis=1)
     return weights
 
 
@@ -138,7 +141,8 @@ def limited_slopes(slopes: FloatArray, values: FloatArray, nodes: FloatArray) ->
     if nodes.size == 1:
         return slopes
     flatter, steeper = _chords(values, nodes)
-    return np.clip(slopes, flatter, np.maximum(flatter, np.minimum(steeper, 3.0 * flatter)))
+    steepest = np.maximum(flatter, np.minimum(steeper, 3.0 * flatter))
+    return np.asarray(np.minimum(np.maximum(slopes, flatter), steepest))
 
 
 def plausible_slopes(slopes: FloatArray, values: FloatArray, nodes: FloatArray) -> FloatArray:
@@ -151,13 +155,14 @@ def plausible_slopes(slopes: FloatArray, values: FloatArray, nodes: FloatArray) 
         return slopes
     flatter, steeper = _chords(values, nodes)
     steeper[0] = np.inf
-    return np.clip(slopes, np.maximum(0.5 * flatter, 0.0), np.maximum(2.0 * steeper, 0.0))
+    least, most = np.maximum(0.5 * flatter, 0.0), np.maximum(2.0 * steeper, 0.0)
+    return np.asarray(np.minimum(np.maximum(slopes, least), most))
 
 
 def _chords(values: FloatArray, nodes: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Flatter and steeper of the chords on either side of each node of axis 0."""
-    gaps = np.diff(nodes).reshape((-1,) + (1,) * (values.ndim - 1))
-    chords = np.diff(values, axis=0) / gaps
+    gaps = (nodes[1:] - nodes[:-1]).reshape((-1,) + (1,) * (values.ndim - 1))
+    chords = (values[1:] - values[:-1]) / gaps
     left = np.concatenate([chords[:1], chords])
     right = np.concatenate([chords, chords[-1:]])
     flatter, steeper = np.minimum(left, right), np.maximum(left, right)
@@ -211,5 +216,5 @@ class CashGrid:
         k = np.floor((np.arcsinh(cash / self.scale) - self.first) / self.step).astype(np.int64)
         # The kink's own place is decided by value: rounding must not put it in the wrong cell.
         k = np.where(cash >= self.nodes[self.kink], np.maximum(k, self.kink), np.minimum(k, self.kink - 1))
-        k = np.clip(k, 0, self.nodes.size - 3)
+        k = np.minimum(np.maximum(k, 0), self.nodes.size - 3)
         return k + (k >= self.kink)

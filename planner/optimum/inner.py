@@ -238,7 +238,8 @@ class _Kept:
         """From a continuation's level and slopes; `unit` is the utility of one unit of the level."""
         spend = felicity.spend(unit * np.maximum(slope, TINY_SLOPE))
         knots = np.maximum.accumulate(spend + nodes[:, None], axis=1)
-        return cls(nodes, spend, knots, np.stack([level, slope, slope2, spend, knots]).reshape(5, -1))
+        numbers = np.concatenate([level, slope, slope2, spend, knots], axis=None).reshape(5, -1)
+        return cls(nodes, spend, knots, numbers)
 
 
 def _left_of_kink(money: FloatArray, grid: CashGrid) -> FloatArray:
@@ -253,12 +254,15 @@ def _steepest(level: FloatArray, nodes: FloatArray) -> FloatArray:
 
     The doubled node has one chord on each side. See `grids.limited_slopes`.
     """
-    gaps = np.diff(nodes)
-    chords = np.diff(level, axis=1) / np.where(gaps > 0, gaps, 1.0)[:, None]
+    gaps = nodes[1:] - nodes[:-1]
+    chords = (level[:, 1:] - level[:, :-1]) / np.where(gaps > 0, gaps, 1.0)[:, None]
     chords[:, gaps == 0] = np.inf
-    end = np.full_like(chords[:, :1], np.inf)
-    flattest = np.minimum(np.concatenate([end, chords], axis=1), np.concatenate([chords, end], axis=1))
-    return np.asarray(3.0 * np.maximum(flattest, 0.0))
+    flattest = np.empty_like(level)
+    flattest[:, 0], flattest[:, -1] = chords[:, 0], chords[:, -1]
+    np.minimum(chords[:, 1:], chords[:, :-1], out=flattest[:, 1:-1])
+    np.maximum(flattest, 0.0, out=flattest)
+    flattest *= 3.0
+    return flattest
 
 
 def _bracket(points: FloatArray, knots: FloatArray) -> IntArray:
@@ -305,11 +309,11 @@ def _keep_some(
         level, rate = hermite(y, left, right, corners)
         price = weight * felicity.smooth.marginal(level) * np.maximum(rate, TINY_SLOPE)
         excess = y + np.minimum(felicity.spend(price), money) - money
-        y = np.clip(y - excess / (1.0 + slope_of_spending), left, highest)
+        y = np.minimum(np.maximum(y - excess / (1.0 + slope_of_spending), left), highest)
     level, rate = hermite(y, left, right, corners)
     worth, unit = felicity.smooth.value_and_marginal(level)
     unit *= weight
     price = unit * np.maximum(rate, TINY_SLOPE)
     y = np.minimum(y, np.maximum(money, 0.0))
-    share = np.clip((y - left) / width, 0.0, 1.0)
+    share = np.minimum(np.maximum((y - left) / width, 0.0), 1.0)
     return money - y, price, weight * worth, unit * (other0 + share * (other1 - other0))

@@ -12,6 +12,7 @@ than cash. `settle` then calls "withdrawal" the part that spending takes back.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -135,8 +136,8 @@ class Outer:
     def side_slopes(self, g: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Slope of T just below and just above g."""
         x = self.situation.tax.x
-        below = np.clip(np.searchsorted(x, g, side="left") - 1, 0, x.size - 1)
-        above = np.clip(np.searchsorted(x, g, side="right") - 1, 0, x.size - 1)
+        below = np.maximum(np.searchsorted(x, g, side="left") - 1, 0)
+        above = np.maximum(np.searchsorted(x, g, side="right") - 1, 0)
         return self.tax_slopes[below], self.tax_slopes[above]
 
     def search(
@@ -182,7 +183,7 @@ class Outer:
         below, above = self.side_slopes(gross)
         least = np.where(gross >= self.high, -np.inf, 1.0 - np.maximum(above, below))
         most = np.where(gross <= self.low, np.inf, 1.0 - np.minimum(above, below))
-        exchange = np.clip(exchange, least, most)
+        exchange = np.minimum(np.maximum(exchange, least), most)
         slope2 = self._deferred_slope(gross, along, exchange, below, above)
         return OuterChoice(level, gross, along, exchange, slope2)
 
@@ -221,7 +222,7 @@ class Outer:
         g = places[start[point] + offset]
         if shift is not None:
             g = g + shift[point]
-        return point, np.clip(g, self.low[point], self.high[point])
+        return point, np.minimum(np.maximum(g, self.low[point]), self.high[point])
 
     def _best(self, level: FloatArray, gross: FloatArray, tries: list[Tries]) -> FloatArray:
         """The g of the highest level among the start's (`level`) and what is tried, the last of equals."""
@@ -288,7 +289,7 @@ class Outer:
         for step in range(ROOT_STEPS):
             crossing = near_slope * far_slope < 0
             share = np.divide(near_slope, near_slope - far_slope, out=np.full(near.size, 0.5), where=crossing)
-            trial = near + np.clip(share, 0.02, 0.98) * (far - near)
+            trial = near + np.minimum(np.maximum(share, 0.02), 0.98) * (far - near)
             value, slope, trial_along, trial_exchange = self.evaluate(move, trial, rate)
             better = value > best[0]
             for kept, new in zip(best, (value, trial, trial_along, trial_exchange), strict=True):
@@ -311,7 +312,7 @@ def best_on_nodes(surface: Surface, taxable: FloatArray, situation: Situation) -
     """Best outer choice at every node of (taxable, tax-deferred, tax-free), arrays (n1, n2, n3)."""
     nodes2, nodes3 = surface.deferred.nodes, surface.free.nodes
     shape = (taxable.size, nodes2.size, nodes3.size)
-    i, a, l3 = (index.ravel() for index in np.indices(shape))
+    i, a, l3 = _indices(shape)
     outer = Outer(surface, situation, (taxable[i], nodes2[a], nodes3[l3]), l3)
     if nodes2.size == 1:
         level, gross = np.zeros(i.size), np.zeros(i.size)
@@ -326,6 +327,12 @@ def best_on_nodes(surface: Surface, taxable: FloatArray, situation: Situation) -
         choice.exchange.reshape(shape),
         choice.slope2.reshape(shape),
     )
+
+
+@lru_cache(maxsize=8)
+def _indices(shape: tuple[int, int, int]) -> tuple[IntArray, ...]:
+    """Index along each axis of every node, flat; the same for all years."""
+    return tuple(index.ravel() for index in np.indices(shape))
 
 
 def _node_levels(

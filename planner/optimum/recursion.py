@@ -145,6 +145,8 @@ def solve(
     situations = [[situation_of(problem, t, h) for h in range(n_statuses)] for t in range(n_years)]
     portfolio = np.zeros(level.shape, dtype=np.int64)
     maps: dict[tuple[float, ...], GrowthMaps] = {}
+    cash_grids: dict[float, CashGrid] = {}
+    places = np.arange(portfolio[0, 0].size).reshape(shape)
 
     for t in range(n_years - 1, -1, -1):
         expected: dict[tuple[int, tuple[float, ...]], tuple[FloatArray, FloatArray]] = {}
@@ -165,26 +167,26 @@ def solve(
                 total2 = total2 + chance * expected[key][1]
             best = total.argmax(axis=0)
             portfolio[t, h] = best
-            later = np.take_along_axis(total, best[None], axis=0)[0]
-            later2 = np.take_along_axis(total2, best[None], axis=0)[0]
+            held = best * best.size + places
+            later, later2 = total.take(held), total2.take(held)
 
             felicity = Felicity(problem.utility, smooth, float(problem.need[t, h]), problem.ceiling)
             following_level = _continuation(
                 later, later2, float(later_weights[t, h]), problem.discount, smooth, slopes, grids
             )
-            grid = CashGrid.build(
-                settings.cash, grids[0].scale, low, high, felicity.need * problem.utility.essential
-            )
+            kink = felicity.need * problem.utility.essential
+            if kink not in cash_grids:
+                cash_grids[kink] = CashGrid.build(settings.cash, grids[0].scale, low, high, kink)
             table = cash_table(
                 following_level,
                 felicity,
-                grid,
+                cash_grids[kink],
                 grids[0].nodes,
                 grids[2].nodes,
                 float(weights[t, h]),
             )
             surface = Surface(table, felicity, grids[1], grids[2], slopes[1], slopes[2], problem.conversions)
-            choice = best_on_nodes(surface, grids[0].nodes, situation_of(problem, t, h))
+            choice = best_on_nodes(surface, grids[0].nodes, situations[t][h])
             level[t, h] = choice.level
             gross[t, h] = choice.gross
             found[t, h] = _slopes(choice, slopes[2], grids)

@@ -46,20 +46,17 @@ class Surface:
         money = table.grid.nodes[:, None]
         self.keeps = (table.spending < money - 1e-9 * np.abs(money)).ravel()
 
-        def along2(values: FloatArray) -> FloatArray:
-            return (slopes2 @ values.reshape(n2, -1)).reshape(self.shape)
-
-        def along3(values: FloatArray) -> FloatArray:
-            return np.asarray(values @ slopes3.T)
-
-        level, slope = table.level, table.slope
-        level2 = limited_slopes(table.slope2, level, deferred.nodes)
-        level3 = limited_slopes(along3(level).transpose(2, 0, 1), level.transpose(2, 0, 1), free.nodes)
-        level3 = level3.transpose(1, 2, 0)
-        plain = [level, slope, level2, along2(slope)]
-        sloped = [level3, along3(slope), along3(level2), along3(plain[3])]
-        # Eight numbers a node, each in a row of its own: what is taken from a row is contiguous.
-        self.numbers = np.stack(plain + sloped).reshape(8, -1)
+        level = table.level.reshape(n2, -1)
+        level2 = limited_slopes(table.slope2, table.level, deferred.nodes).reshape(n2, -1)
+        plain = [level, table.slope.reshape(n2, -1), level2, slopes2 @ table.slope.reshape(n2, -1)]
+        # Four numbers a node, or eight, each in a row of its own: what is taken from a row is contiguous.
+        numbers = np.concatenate(plain).reshape(4, -1, n3)
+        if n3 > 1:
+            along3 = numbers @ slopes3.T
+            steep, level = along3[0].T, numbers[0].T
+            along3[0] = limited_slopes(steep, level, free.nodes).T
+            numbers = np.concatenate([numbers, along3])
+        self.numbers = numbers.reshape(numbers.shape[0], -1)
 
     def __call__(
         self, cash: FloatArray, deferred: FloatArray, node3: IntArray, free: FloatArray | None
