@@ -52,7 +52,7 @@ def test_slopes_are_those_of_the_level(conversions: bool) -> None:
 
 def test_the_level_never_rises_above_the_upper_corner_of_its_cell() -> None:
     surface = solve(three_accounts(False), SolverSettings(10, 12, 8, 30)).surfaces[0][0]
-    grid = surface.table.grid
+    grid = surface.grid
     generator = np.random.default_rng(4)
     n = 2_000
     m, j, i = (
@@ -71,7 +71,7 @@ def test_the_level_never_rises_above_the_upper_corner_of_its_cell() -> None:
         np.zeros(m.size, dtype=np.int64),
         between(surface.free.nodes, i, share[2]),
     )
-    upper = surface.table.level[j + 1, m + 1, i + 1]
+    upper = surface.numbers[0].reshape(surface.shape)[j + 1, m + 1, i + 1]
     # Points at a cell's very end are rounded into the next: none here.
     assert (found <= upper * (1 + 1e-12)).all()
 

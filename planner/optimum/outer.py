@@ -351,24 +351,25 @@ def _node_levels(
     feasible = (y2 <= (1 - s.minimum_share) * x2 + slack) & (y2 >= (1 - s.accessible_share) * x2 - slack)
     a, j = np.nonzero(feasible)
     g = nodes2[a] - nodes2[j]
-    table, grid = surface.table, surface.table.grid
+    grid = surface.grid
     n_cash = grid.nodes.size
+    levels, slopes = surface.numbers[:2]
     money = taxable[:, None, None] + (s.income + g - s.tax(g))[None, :, None] + nodes3
     if s.conversions:
         free = nodes3[None, :] + (g - s.minimum_share * nodes2[a])[:, None]
         rows = hermite_rows(surface.free, surface.slopes3, free)  # (pairs, n3, n3)
-        level = (table.level[j] @ rows.transpose(0, 2, 1)).reshape(-1, n3)
-        slope = (table.slope[j] @ rows.transpose(0, 2, 1)).reshape(-1, n3)
+        levels, slopes = (
+            (numbers.reshape(n2, n_cash, n3)[j] @ rows.transpose(0, 2, 1)).ravel()
+            for numbers in (levels, slopes)
+        )
         first = np.arange(a.size)[None, :, None] * n_cash
     else:
-        level, slope = table.level.reshape(-1, n3), table.slope.reshape(-1, n3)
         first = j[None, :, None] * n_cash
     cell = grid.cell(money)
     ((h0, h1), (g0, g1)), _ = hermite_basis(money, grid.nodes[cell], grid.nodes[cell + 1], False)
     row = first + cell
 
     at, after = row * n3 + np.arange(n3), (row + 1) * n3 + np.arange(n3)
-    levels, slopes = level.ravel(), slope.ravel()
     value = h0 * levels[at] + g0 * slopes[at] + h1 * levels[after] + g1 * slopes[after]
     full = np.full((n1, n2, n2, n3), -np.inf)
     full[:, a, j, :] = value

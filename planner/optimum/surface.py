@@ -35,7 +35,7 @@ class Surface:
         slopes3: FloatArray,
         conversions: bool,
     ) -> None:
-        self.table = table
+        self.grid = table.grid
         self.deferred = deferred
         self.free = free
         self.slopes3 = slopes3
@@ -91,7 +91,7 @@ class Surface:
         larger arrays, because a call of numpy costs as much as the arithmetic on a thousand points.
         """
         cash, deferred, node3, free = points
-        grid = self.table.grid
+        grid = self.grid
         n2, n_cash, n3 = self.shape
         with_slopes = result.shape[0] > 1
         m, j = grid.cell(cash), self.deferred.cell(deferred)
@@ -162,7 +162,7 @@ class Surface:
         The price is smooth over a cell where spending itself turns. Where all money is spent at the
         nodes around, so it is here.
         """
-        grid = self.table.grid
+        grid = self.grid
         _, n_cash, n3 = self.shape
         m, j, i3 = grid.cell(cash), self.deferred.cell(deferred), self.free.cell(free)
         kept = np.zeros(cash.size, dtype=bool)
