@@ -35,7 +35,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from planner.cashflow import advance, estate_money
-from planner.optimum.duals import LARGEST_FACTOR, Expectation, Factors, YearChoice, YearPrices
+from planner.optimum.duals import LARGEST_FACTOR, BoolArray, Expectation, Factors, YearChoice, YearPrices
 from planner.optimum.policy import OptimalPolicy
 from planner.piecewise import FloatArray
 from planner.problem import TAX_DEFERRED, TAX_FREE, TAXABLE, Decision, IntArray, Problem, State
@@ -109,13 +109,20 @@ def prove(
         Paths of the node law to use instead of drawing `n_paths`, for instance all there are.
     """
     reader = prices or PriceReader(policy)
-    # Which of two ways to price around binding minimum distributions is tried on paths of its own, so
-    # that the choice does not flatter the bound.
-    pilots = [
-        _Proof(problem, policy, reader, min(n_paths, PILOT_PATHS), child, follow).run().mean
-        for child, follow in zip(generator.spawn(2), (False, True), strict=True)
-    ]
-    return _Proof(problem, policy, reader, n_paths, generator, pilots[1] < pilots[0], scenarios).run()
+    follow = False
+    if ((problem.minimum_share > 0) & (problem.minimum_share < 1)).any():
+        # Which of two ways to price around binding minimum distributions is tried on paths of its own, so
+        # that the choice does not flatter the bound; both ways on the same paths, in one pass.
+        (child,) = generator.spawn(1)
+        n_pilots = min(n_paths, PILOT_PATHS)
+        drawn = draw_scenarios(problem, n_pilots, child, law="nodes")
+        assert drawn.node is not None
+        twice = Scenarios(np.tile(drawn.status, (2, 1)), node=np.tile(drawn.node, (2, 1)))
+        pilots = _Proof(problem, policy, reader, twice, np.arange(2 * n_pilots) >= n_pilots).run()
+        without, with_them = pilots.terms.reshape(2, -1).sum(axis=1)
+        follow = bool(with_them < without)
+    scenarios = scenarios or draw_scenarios(problem, n_paths, generator, law="nodes")
+    return _Proof(problem, policy, reader, scenarios, np.full(scenarios.n_paths, follow)).run()
 
 
 class _Proof:
@@ -126,15 +133,11 @@ class _Proof:
         problem: Problem,
         policy: OptimalPolicy,
         prices: PriceReader,
-        n_paths: int,
-        generator: np.random.Generator,
-        follow_minimum: bool,
-        scenarios: Scenarios | None = None,
+        scenarios: Scenarios,
+        follow_minimum: BoolArray,
     ) -> None:
         self.problem, self.policy, self.prices = problem, policy, prices
         self.follow_minimum = follow_minimum
-        if scenarios is None:
-            scenarios = draw_scenarios(problem, n_paths, generator, law="nodes")
         self.n_paths = scenarios.n_paths
         assert scenarios.node is not None
         self.status, self.node = scenarios.status.astype(np.int64), scenarios.node.astype(np.int64)
@@ -145,6 +148,8 @@ class _Proof:
         spread = riskiest - problem.node_weights @ riskiest
         self.z = spread / np.sqrt(problem.node_weights @ spread**2 + 1e-300)
         self.middle = int(np.abs(self.z).argmin())
+        tilted = np.exp(TILTS[:, None] * self.z)[:, None, :, None] * self.discounted  # (tilts, p, q, 3)
+        self.tilts = [tilted[..., i].reshape(-1, self.z.size).T for i in range(3)]
         # An estate's price has to keep pace with those of the living: tilting these alone made it worse.
         self.tilted = problem.n_portfolios > 1 and not problem.estate.wanted
         self.keep = np.array([1.0, 1.0 - problem.heirs_tax_rate, 1.0])
@@ -222,7 +227,7 @@ class _Proof:
         expect = Expectation(self._expected(living), self._expected(passed))
 
         limit = factor[path] * raw[path]
-        prices, following, terms, most = self._set_prices(choice, decision, expect, raw[path], limit)
+        prices, following, terms, most = self._set_prices(choice, path, decision, expect, raw[path], limit)
 
         discount = problem.discount**t
         self.terms[path, :5] += discount * terms
@@ -261,21 +266,25 @@ class _Proof:
         """
         spent = np.maximum(choice.year.spending, 0.0) / self.problem.utility.risk_aversion
         price = living[:, self.middle, TAXABLE]
-        best, least = np.zeros(spent.size), np.full(spent.size, np.inf)
-        for tau in TILTS:
-            expected = self._expected(living * np.exp(tau * self.z)[:, None] + passed)
-            held = np.take_along_axis(expected, decision.portfolio[:, None, None], axis=1)[:, 0]
-            slack = ((expected.max(axis=1) - held) * choice.left).sum(axis=1)
-            cost = slack + 0.5 * STRAYING * tau**2 * spent * price
-            best, least = np.where(cost < least, tau, best), np.minimum(cost, least)
-        return np.exp(best[:, None] * self.z)
+        # Account by account, so that all tilts are one product of matrices: (n, q) by (q, tilts portfolios).
+        cost = 0.5 * STRAYING * TILTS[:, None] ** 2 * spent * price
+        paths = np.arange(spent.size)
+        for account in range(3):
+            expected = living[:, :, account] @ self.tilts[account]
+            expected = expected.reshape(spent.size, TILTS.size, -1)
+            expected += (passed[:, :, account] @ self.discounted[:, :, account].T)[:, None, :]
+            slack = expected.max(axis=2) - expected[paths, :, decision.portfolio]
+            cost += slack.T * choice.left[:, account]
+        return np.exp(TILTS[cost.argmin(axis=0), None] * self.z)
 
     def _expected(self, values: FloatArray) -> FloatArray:
-        return np.asarray(np.einsum("nqi,pqi->npi", values, self.discounted))
+        """E_t[beta values R_p] (n, portfolios, 3) of values (n, q, 3)."""
+        return np.stack([values[:, :, i] @ self.discounted[:, :, i].T for i in range(3)], axis=-1)
 
     def _set_prices(
         self,
         choice: YearChoice,
+        path: IntArray,
         decision: Decision,
         expect: Expectation,
         raw: FloatArray,
@@ -310,7 +319,7 @@ class _Proof:
 
         # An empty account costs nothing to price: tax-deferred is priced high, so that nobody gains by
         # pretending to hold it; (nearly) empty tax-free follows tax-deferred's factor.
-        target = choice.deferred_target(start, m2, m3, self.follow_minimum)
+        target = choice.deferred_target(start, m2, m3, self.follow_minimum[path])
         deferred = expect.factor(TAX_DEFERRED, target, estate)
         in_step = STEADY * start / raw[:, TAXABLE]
         holds = binding & ~little[:, TAX_DEFERRED]
@@ -322,24 +331,23 @@ class _Proof:
 
         def priced(cash: FloatArray) -> tuple[YearPrices, Factors]:
             taxable = expect.factor(TAXABLE, cash, estate)
-            accounts = np.minimum(np.stack([taxable, deferred, free], axis=1), LARGEST_FACTOR)
+            factor = np.stack(np.broadcast_arrays(taxable, deferred, free), axis=-1)
+            accounts = np.minimum(factor, LARGEST_FACTOR)
             factors = Factors(accounts, estate)
             nu = expect.of(factors)
-            held = np.take_along_axis(nu, decision.portfolio[:, None, None], axis=1)[:, 0]
-            return YearPrices(cash, limit[:, TAXABLE], m2, m3, nu.max(axis=1), held), factors
+            held = nu[..., paths, decision.portfolio, :]
+            return YearPrices(cash, limit[:, TAXABLE], m2, m3, nu.max(axis=-2), held), factors
 
+        paths = np.arange(start.size)
         first, _ = priced(start)
-        terms, most = choice.terms(first)
-        chosen = start
         least = np.maximum(0.5 * start, 1.05 * estate * estate_most[:, TAXABLE])
-        for candidate in choice.cash_prices(raw[:, TAXABLE], first):
-            cash = np.clip(candidate, least, np.minimum(limit[:, TAXABLE], m3))
-            other, other_most = choice.terms(priced(cash)[0])
-            better = other.sum(axis=1) < terms.sum(axis=1)
-            chosen = np.where(better, cash, chosen)
-            terms, most = np.where(better[:, None], other, terms), np.where(better, other_most, most)
-        prices, factors = priced(chosen)
-        return prices, factors, terms, most
+        most = np.minimum(limit[:, TAXABLE], m3)
+        tried = np.minimum(np.maximum(choice.cash_prices(raw[:, TAXABLE], first), least), most)
+        tried = np.concatenate([start[None], tried])
+        terms, gained = choice.terms(priced(tried)[0])
+        best = terms.sum(axis=-1).argmin(axis=0)
+        prices, factors = priced(tried[best, paths])
+        return prices, factors, terms[best, paths], gained[best, paths]
 
 
 def _best_estate(problem: Problem, price: FloatArray) -> FloatArray:

@@ -18,7 +18,7 @@ LARGEST_FACTOR = 4.0  # on the reading of a price; only empty accounts come near
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Factors:
-    """Factors on next year's raw prices: accounts (n, 3), the estate's (n,)."""
+    """Factors on next year's raw prices: accounts (..., n, 3), the estate's (n,)."""
 
     accounts: FloatArray
     estate: FloatArray
@@ -40,33 +40,33 @@ class Expectation:
     estate: FloatArray
 
     def of(self, factors: Factors) -> FloatArray:
-        """Expectations (n, n_portfolios, 3) at these factors."""
-        living = factors.accounts[:, None, :] * self.living
+        """Expectations (..., n, n_portfolios, 3) at these factors."""
+        living = factors.accounts[..., None, :] * self.living
         return np.asarray(living + factors.estate[:, None, None] * self.estate)
 
     def factor(self, account: int, limit: FloatArray, estate: FloatArray) -> FloatArray:
-        """Largest factor (n,) of an account whose expectation is within the limit in every portfolio.
+        """Largest factor of an account whose expectation is within the limit (..., n) in every portfolio.
 
         At least 0; `estate` (n,) is the factor on the estate's price.
         """
-        room = limit[:, None] - estate[:, None] * self.estate[:, :, account]
+        room = limit[..., None] - estate[:, None] * self.estate[:, :, account]
         largest = room / np.maximum(self.living[:, :, account], 1e-300)
-        return np.asarray(np.maximum(largest.min(axis=1), 0.0))
+        return np.asarray(np.maximum(largest.min(axis=-1), 0.0))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class YearPrices:
-    """A year's prices in utility per unit of money, on n paths.
+    """A year's prices in utility per unit of money, on n paths; `of` them several sets to choose from.
 
     Attributes
     ----------
-    cash : ndarray of shape (n,)
+    cash : ndarray of shape (..., n)
         l.
     cash_limit : ndarray of shape (n,)
         What last year's expectation allowed for l.
     deferred, free : ndarray of shape (n,)
         m2, m3.
-    best, held : ndarray of shape (n, 3)
+    best, held : ndarray of shape (..., n, 3)
         nu in the best portfolio for each account, and in the one that the plan holds.
     """
 
@@ -155,11 +155,11 @@ class YearChoice:
         return chords[below], chords[above]
 
     def deferred_target(
-        self, cash: FloatArray, m2: FloatArray, m3: FloatArray, follow_minimum: bool
+        self, cash: FloatArray, m2: FloatArray, m3: FloatArray, follow_minimum: BoolArray
     ) -> FloatArray:
         """Limit for nu2: with it B has little slack.
 
-        Where the minimum distribution binds, `follow_minimum` takes the value without slack even above
+        Where the minimum distribution binds, `follow_minimum` (n,) takes the value without slack even above
         m2: exact this year, but errors of the reading then grow by 1 / (1 - d) a year.
         """
         d = float(self.problem.minimum_share[self.t, self.h])
@@ -173,8 +173,8 @@ class YearChoice:
         binding = self.at_minimum & (bound > kept + spread)
         return np.where(binding, np.where(follow_minimum, bound, np.minimum(bound, free)), free)
 
-    def cash_prices(self, raw: FloatArray, prices: YearPrices) -> list[FloatArray]:
-        """Prices of cash worth trying, each (n,): as read, marginal utility, and those that fit g.
+    def cash_prices(self, raw: FloatArray, prices: YearPrices) -> FloatArray:
+        """Prices of cash worth trying, (k, n): as read, marginal utility, and those that fit g.
 
         The withdrawal is what the prices ask for where nu2 / l lies on its step of the tax schedule.
         """
@@ -183,30 +183,30 @@ class YearChoice:
         found.append(self.problem.utility.marginal(self.year.spending / need))
         for rate in (*self.rates(), *self.hull_rates()):
             if self.problem.conversions:
-                found.append((prices.free - prices.best[:, TAX_DEFERRED]) / np.maximum(rate, 1e-9))
+                found.append((prices.free - prices.best[..., TAX_DEFERRED]) / np.maximum(rate, 1e-9))
             else:
-                found.append(prices.best[:, TAX_DEFERRED] / np.maximum(1.0 - rate, 1e-9))
-        return found
+                found.append(prices.best[..., TAX_DEFERRED] / np.maximum(1.0 - rate, 1e-9))
+        return np.stack(found)
 
     def terms(self, prices: YearPrices) -> tuple[FloatArray, FloatArray]:
-        """Gap by term (n, 5), and max_c [n f(c/n) - l c] + B (n,)."""
+        """Gap by term (..., n, 5), and max_c [n f(c/n) - l c] + B (..., n)."""
         year, y = self.year, self.left
         cash, m2, m3 = prices.cash, prices.deferred, prices.free
         w2, w3, k = year.withdrawal[:, TAX_DEFERRED], year.withdrawal[:, TAX_FREE], year.conversion
         spend, got = self._best_spending(cash), self._felicity(year.spending) - cash * year.spending
         relaxed = self._relaxed_withdrawal(prices)
-        plan = cash * (w2 - year.tax) + m3 * k + prices.held[:, TAX_DEFERRED] * y[:, TAX_DEFERRED]
-        cash_held = (cash - prices.held[:, TAXABLE]) * y[:, TAXABLE]
+        plan = cash * (w2 - year.tax) + m3 * k + prices.held[..., TAX_DEFERRED] * y[:, TAX_DEFERRED]
+        cash_held = (cash - prices.held[..., TAXABLE]) * y[:, TAXABLE]
         # Contributions are priced at the best portfolio and invested in the one that is held.
         paid_in = (prices.best - prices.held) * self.paid_in
         terms = [
             spend - got,
             cash_held + (prices.cash_limit - cash) * year.opening[:, TAXABLE],
-            (m3 - prices.held[:, TAX_FREE]) * y[:, TAX_FREE] + paid_in[:, TAX_FREE],
+            (m3 - prices.held[..., TAX_FREE]) * y[:, TAX_FREE] + paid_in[..., TAX_FREE],
             (m3 - cash) * w3,
-            relaxed - (plan - m2 * year.opening[:, TAX_DEFERRED]) + paid_in[:, TAX_DEFERRED],
+            relaxed - (plan - m2 * year.opening[:, TAX_DEFERRED]) + paid_in[..., TAX_DEFERRED],
         ]
-        return np.stack(terms, axis=1), spend + relaxed
+        return np.stack(np.broadcast_arrays(*terms), axis=-1), spend + relaxed
 
     def _felicity(self, c: FloatArray) -> FloatArray:
         need = self.problem.need[self.t, self.h]
@@ -226,13 +226,13 @@ class YearChoice:
     def _relaxed_withdrawal(self, prices: YearPrices) -> FloatArray:
         """B: the most that choosing g, w2 and X at these prices can be worth, over its vertices."""
         problem = self.problem
-        cash, m2, m3 = (a[:, None] for a in (prices.cash, prices.deferred, prices.free))
-        nu2 = prices.best[:, TAX_DEFERRED, None]
+        cash, m2, m3 = (a[..., None] for a in (prices.cash, prices.deferred, prices.free))
+        nu2 = prices.best[..., TAX_DEFERRED, None]
         d = float(problem.minimum_share[self.t, self.h])
         s = float(problem.accessible_share[self.t, self.h])
         most = self.most_deferred[:, None]
         ends = np.concatenate([d * most, s * most], axis=1)
-        g = np.concatenate([np.broadcast_to(self.tax.x, (cash.size, self.tax.x.size)), ends], axis=1)
+        g = np.concatenate([np.broadcast_to(self.tax.x, (ends.shape[0], self.tax.x.size)), ends], axis=1)
         g = np.minimum(g, s * most)
         fixed = (m3 if problem.conversions else cash) * g - cash * self.tax(g) - nu2 * g
         per_balance = nu2 - m2 - (d * (m3 - cash) if problem.conversions else 0.0)
@@ -240,7 +240,7 @@ class YearChoice:
         largest = np.minimum(g / d, most) if d > 0 else np.broadcast_to(most, g.shape)
         # Within rounding of one another the smallest may exceed the largest.
         largest = np.maximum(largest, smallest)
-        return np.asarray((fixed + np.maximum(per_balance * smallest, per_balance * largest)).max(axis=1))
+        return np.asarray((fixed + np.maximum(per_balance * smallest, per_balance * largest)).max(axis=-1))
 
 
 def _turns_down(x: FloatArray, y: FloatArray, a: int, b: int, c: int) -> bool:
