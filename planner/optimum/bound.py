@@ -43,7 +43,7 @@ from planner.simulation import Scenarios, draw_scenarios
 
 EMPTY = 1e-6  # share of wealth below which an account counts as empty
 LITTLE = 0.1  # essential years below which tax-free money is priced as read, at the cost of a slack
-STEADY = 1.1  # most by which tax-deferred's factor exceeds cash's while the minimum distribution binds
+STEADY = 1.2  # most by which tax-deferred's factor exceeds cash's while the minimum distribution binds
 PILOT_PATHS = 64
 _TILTS = np.array([0.001, 0.002, 0.004, 0.007, 0.011, 0.016, 0.023, 0.032, 0.045, 0.06, 0.08])
 TILTS = np.concatenate([-_TILTS[::-1], [0.0], _TILTS])  # of next year's prices, per standard deviation
