@@ -7,6 +7,7 @@ taxable, then tax-free; what remains earns the return.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -38,8 +39,15 @@ def fund(
 def grow(balances: FloatArray, gross: FloatArray, drag: FloatArray) -> FloatArray:
     """Balances (..., 3) after a year at gross return R, and R - drag in taxable; R, drag (...)."""
     gross = np.asarray(gross)
-    factor = np.stack(np.broadcast_arrays(gross - drag, gross, gross), axis=-1)
-    return np.asarray(balances * factor)
+    factors = (gross - drag, gross, gross)
+    return by_account(*(balances[..., i] * factor for i, factor in enumerate(factors)))
+
+
+def by_account(taxable: FloatArray, tax_deferred: FloatArray, tax_free: FloatArray) -> FloatArray:
+    """Money (..., 3) from that of each account; an account's numbers lie side by side in memory."""
+    columns = np.empty((3, *np.broadcast_shapes(taxable.shape, tax_deferred.shape, tax_free.shape)))
+    columns[TAXABLE], columns[TAX_DEFERRED], columns[TAX_FREE] = taxable, tax_deferred, tax_free
+    return np.moveaxis(columns, 0, -1)
 
 
 def estate_money(problem: Problem, balances: FloatArray) -> FloatArray:
@@ -51,11 +59,20 @@ def estate_money(problem: Problem, balances: FloatArray) -> FloatArray:
 def tax_due(problem: Problem, t: int, status: IntArray, gross_withdrawal: FloatArray) -> FloatArray:
     """T(w2 + k) in year t for each path; all (n_paths,)."""
     tax = np.empty(gross_withdrawal.shape)
-    for h, function in enumerate(problem.tax[t]):
-        here = status == h
-        if here.any():
-            tax[here] = function(gross_withdrawal[here])
+    for h, here in by_status(status, problem.n_statuses):
+        tax[here] = problem.tax[t][h](gross_withdrawal[here])
     return tax
+
+
+def by_status(status: IntArray, n_statuses: int) -> Iterator[tuple[int, slice | IntArray]]:
+    """Each status that occurs, with the paths in it: a slice where all are, which spares copies."""
+    for h in range(n_statuses):
+        here = np.flatnonzero(status == h)
+        if here.size == status.size:
+            yield h, slice(None)
+            return
+        if here.size:
+            yield h, here
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -112,10 +129,14 @@ def advance(problem: Problem, t: int, state: State, decision: Decision, gross: F
     )
     y1, from_tax_free, y3 = fund(cash, spending, tax_free)
     y2 = np.maximum(0.0, x[:, TAX_DEFERRED] - withdraw - convert)
-    contribution = problem.contribution[t][status]
-    invested = np.stack([y1, y2, np.maximum(0.0, y3)], axis=1) + contribution
+    invested = by_account(y1, y2, np.maximum(0.0, y3))
+    if problem.contribution[t].any():
+        contribution = problem.contribution[t][status]
+        invested += contribution
+    else:
+        contribution = np.broadcast_to(0.0, invested.shape)
     closing = grow(invested, gross, problem.drag[decision.portfolio])
-    withdrawal = np.stack([np.maximum(0.0, x[:, TAXABLE] - y1), withdraw, from_tax_free], axis=1)
+    withdrawal = by_account(np.maximum(0.0, x[:, TAXABLE] - y1), withdraw, from_tax_free)
     return Year(
         opening=x,
         income=income,
@@ -168,10 +189,8 @@ def withdraw_for_spending(
     target = np.minimum(target, problem.ceiling * problem.need[t][state.status])
     cash = x[:, TAXABLE] + problem.income[t][state.status]
     withdraw = np.empty_like(target)
-    for h, tax in enumerate(problem.tax[t]):
-        here = state.status == h
-        if here.any():
-            withdraw[here] = least_withdrawal(tax, target[here] - cash[here], minimum[here])
+    for h, here in by_status(state.status, problem.n_statuses):
+        withdraw[here] = least_withdrawal(problem.tax[t][h], target[here] - cash[here], minimum[here])
     withdraw = np.minimum(withdraw, accessible)
     available = cash + withdraw - tax_due(problem, t, state.status, withdraw) + x[:, TAX_FREE]
     return withdraw, np.minimum(target, available)

@@ -230,10 +230,10 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
     if (scenarios.status[:, -1] != problem.n_statuses).any():
         raise ValueError("scenarios leave someone alive after the last year")
 
-    # Years are the outer axis in memory, because a year is written at once.
+    # Accounts, then years, are the outer axes in memory, because a year of an account is written at once.
     spending, income, tax, conversion, minimum = np.zeros((5, n_years, n_paths))
-    withdrawal = np.zeros((n_years, n_paths, 3))
-    balances = np.zeros((n_years + 1, n_paths, 3))
+    withdrawal = np.zeros((3, n_years, n_paths))
+    balances = np.zeros((3, n_years + 1, n_paths))
     portfolio = np.zeros((n_years, n_paths), dtype=np.int16)
     estate = np.zeros(n_paths)
     death_year = np.zeros(n_paths, dtype=np.int64)
@@ -243,7 +243,7 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
     lengths = (status < problem.n_statuses).sum(axis=0)
     is_sorted = bool((lengths[1:] <= lengths[:-1]).all())
     path: IntArray | slice = slice(0, n_paths) if is_sorted else np.arange(n_paths)
-    balances[0] = problem.opening
+    balances[:, 0] = problem.opening[:, None]
     state = State(
         balances=np.tile(problem.opening, (n_paths, 1)),
         status=status[0].astype(np.int64),
@@ -258,9 +258,16 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
         decision = policy.decide(problem, t, state)
         gross = scenarios.returns(problem, t, path, decision.portfolio)
         year = advance(problem, t, state, decision, gross)
-        spending[t, path], income[t, path], tax[t, path] = year.spending, year.income, year.tax
-        conversion[t, path], minimum[t, path] = year.conversion, year.minimum
-        withdrawal[t, path], portfolio[t, path] = year.withdrawal, year.portfolio
+        spending[t, path], portfolio[t, path] = year.spending, year.portfolio
+        for kept, new in (
+            (income, year.income),
+            (tax, year.tax),
+            (conversion, year.conversion),
+            (minimum, year.minimum),
+        ):
+            _keep(kept, t, path, new)
+        for account in range(3):
+            _keep(withdrawal[account], t, path, year.withdrawal[:, account])
 
         next_status = status[t + 1, path]
         living = next_status < problem.n_statuses
@@ -274,7 +281,9 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
         else:
             path, last = path[living], path[~living]
         estate[last], death_year[last] = estate_money(problem, year.closing[dies]), t
-        balances[t + 1, path] = year.closing[lives]
+        closing = year.closing[lives]
+        for account in range(3):
+            _keep(balances[account], t + 1, path, closing[:, account])
         next_status = next_status[lives]
         inflation = (
             np.full(next_status.size, problem.inflation)
@@ -282,7 +291,7 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
             else scenarios.inflation[path, t]
         )
         state = State(
-            balances=year.closing[lives],
+            balances=closing,
             status=next_status.astype(np.int64),
             price_level=state.price_level[lives] * (1 + inflation),
             last_inflation=inflation,
@@ -297,9 +306,15 @@ def simulate(problem: Problem, policy: Policy, scenarios: Scenarios) -> Paths:
         tax=tax.T,
         conversion=conversion.T,
         minimum=minimum.T,
-        withdrawal=withdrawal.transpose(1, 0, 2),
+        withdrawal=withdrawal.transpose(2, 1, 0),
         portfolio=portfolio.T,
-        balances=balances.transpose(1, 0, 2),
+        balances=balances.transpose(2, 1, 0),
         estate=estate,
         death_year=death_year,
     )
+
+
+def _keep(kept: FloatArray, t: int, path: IntArray | slice, new: FloatArray) -> None:
+    """Write a year's numbers where there are any: what stays 0 is never touched, and takes no memory."""
+    if new.any():
+        kept[t, path] = new

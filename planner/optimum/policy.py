@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from planner.cashflow import by_account, by_status
 from planner.optimum.grids import LogGrid
 from planner.optimum.inner import TINY_SLOPE
 from planner.optimum.outer import Outer, OuterChoice, Situation
@@ -103,10 +104,7 @@ class OptimalPolicy:
         n = state.status.size
         spending, withdraw, convert = np.empty(n), np.empty(n), np.zeros(n)
         portfolio = np.empty(n, dtype=np.int64)
-        for h in range(problem.n_statuses):
-            here = np.flatnonzero(state.status == h)
-            if not here.size:
-                continue
+        for h, here in by_status(state.status, problem.n_statuses):
             x = state.balances[here]
             read = self.read(t, h, x)
             spending[here] = read.spending
@@ -202,4 +200,4 @@ def settle(
     left = cash + withdraw - spending
     y1 = np.maximum(left, 0.0)
     y3 = np.maximum(balances[:, TAX_FREE] + convert + np.minimum(left, 0.0), 0.0)
-    return withdraw, convert, np.stack([y1, np.maximum(x2 - gross, 0.0), y3], axis=1)
+    return withdraw, convert, by_account(y1, np.maximum(x2 - gross, 0.0), y3)
