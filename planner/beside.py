@@ -1,13 +1,14 @@
 """Independent jobs on a second core: a copy of this process takes some, the caller the others.
 
 The copy (`os.fork`) starts with everything that is in memory, at no cost, and sends back results
-alone. Jobs are handed out one at a time, through a pipe that both read, so that neither waits
-while there is work. Where no copy can be had, or it fails, the caller does everything itself: the
-results are the same.
+alone, the arrays among them through memory that both share. Jobs are handed out one at a time,
+through a pipe that both read, so that neither waits while there is work. Where no copy can be
+had, or it fails, the caller does everything itself: the results are the same.
 """
 
 from __future__ import annotations
 
+import mmap
 import os
 import pickle
 import signal
@@ -24,6 +25,12 @@ _is_copy = False  # in this process: it makes no copies of its own
 MOST_JOBS = 255
 """A job's number is one byte in the pipe, which is read whole or not at all."""
 
+SHARED_BYTES = 512 << 20
+"""Memory set aside for the arrays among a copy's results; pages that are not used cost nothing."""
+
+Done = tuple[bytes, list[tuple[int, int]]]
+"""Results of a copy: pickled, and where in the shared memory their arrays lie."""
+
 
 class Shared(Generic[T]):
     """Jobs shared with a copy of this process; see `shared`."""
@@ -33,6 +40,7 @@ class Shared(Generic[T]):
         self._numbers = -1  # the pipe of numbers of jobs not yet taken
         self._answers = -1  # the pipe of the copy's results
         self._copy = 0
+        self._memory: mmap.mmap | None = None
         self._done: dict[int, T] = {}
         if may_copy() and 1 <= len(jobs) <= MOST_JOBS:
             self._start()
@@ -77,6 +85,8 @@ class Shared(Generic[T]):
         os.write(put, bytes(range(len(self._jobs))))
         os.close(put)
         self._answers, answer = os.pipe()
+        with suppress(OSError, ValueError):
+            self._memory = mmap.mmap(-1, SHARED_BYTES)
         parent = os.getpid()
         self._copy = os.fork()
         if self._copy == 0:
@@ -94,7 +104,7 @@ class Shared(Generic[T]):
                 with suppress(Exception):
                     done[number] = self._jobs[number]()
             with os.fdopen(answer, "wb") as stream:
-                pickle.dump(done, stream)
+                pickle.dump(self._packed(done), stream)
         finally:
             os._exit(0)
 
@@ -103,11 +113,30 @@ class Shared(Generic[T]):
         taken = os.read(self._numbers, 1)
         return taken[0] if taken else None
 
+    def _packed(self, done: dict[int, T]) -> Done:
+        """Pickle results; arrays go to the shared memory as far as it reaches."""
+        places: list[tuple[int, int]] = []
+        end = 0
+
+        def put(buffer: pickle.PickleBuffer) -> bool:
+            nonlocal end
+            raw = buffer.raw()
+            if self._memory is None or end + raw.nbytes > SHARED_BYTES:
+                return True  # into the pickle itself
+            self._memory[end : end + raw.nbytes] = raw
+            places.append((end, end + raw.nbytes))
+            end += -(-raw.nbytes // 64) * 64
+            return False
+
+        return pickle.dumps(done, protocol=5, buffer_callback=put), places
+
     def _answer(self) -> dict[int, T]:
         with os.fdopen(os.dup(self._answers), "rb") as stream:
             content = stream.read()
         try:
-            answer: dict[int, T] = pickle.loads(content)
+            packed, places = pickle.loads(content)
+            buffers = [memoryview(self._memory)[a:b] for a, b in places] if self._memory else []
+            answer: dict[int, T] = pickle.loads(packed, buffers=buffers)
         except Exception:  # a copy that was killed has sent nothing, or half
             return {}
         return answer
@@ -124,6 +153,11 @@ def shared(jobs: Sequence[Callable[[], T]]) -> Iterator[Shared[T]]:
         yield work
     finally:
         work.close()
+
+
+def is_copy() -> bool:
+    """Whether this process is such a copy: it has nobody to report to."""
+    return _is_copy
 
 
 def may_copy() -> bool:

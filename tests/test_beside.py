@@ -7,6 +7,7 @@ import time
 from contextlib import suppress
 from functools import partial
 
+import numpy as np
 import pytest
 
 from planner import beside
@@ -67,6 +68,26 @@ def test_what_the_copy_fails_to_do_is_done_by_the_caller(job) -> None:
 def test_a_job_that_fails_raises() -> None:
     with shared([broken, broken]) as work, pytest.raises(KeyError, match="broken"):
         work.results()
+
+
+def numbered(number: int) -> dict[str, object]:
+    """A large array, a transposed one, and something else."""
+    time.sleep(0.05)
+    return {"large": np.arange(100_000) + number, "turned": np.full((3, 500), number).T, "name": str(number)}
+
+
+@pytest.mark.parametrize("memory", [0, 1_000_000, beside.SHARED_BYTES])
+def test_arrays_come_back_whole(monkeypatch: pytest.MonkeyPatch, memory: int) -> None:
+    """In shared memory as far as it reaches, in the pipe beyond it or where there is none."""
+    monkeypatch.setattr(beside, "SHARED_BYTES", memory)
+    with shared([partial(numbered, number) for number in range(6)]) as work:
+        results = work.results()
+    for number, result in enumerate(results):
+        assert result["name"] == str(number)
+        np.testing.assert_array_equal(result["large"], np.arange(100_000) + number)
+        np.testing.assert_array_equal(result["turned"], np.full((500, 3), number))
+        result["large"][0] = -1  # nobody else's memory any more
+    assert [int(result["large"][1]) for result in results] == [number + 1 for number in range(6)]
 
 
 @needs_copy

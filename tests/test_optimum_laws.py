@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
 from planner.cashflow import Year, advance, estate_money
+from planner.optimum import recursion
 from planner.optimum.policy import OptimalPolicy
 from planner.optimum.recursion import SolverSettings, solve
 from planner.outcomes import path_utilities, utility_difference
@@ -174,6 +175,21 @@ def test_no_rule_beats_the_optimum(name: str) -> None:
 
 
 # More is better, and scale does not matter ----------------------------------------------------------
+
+
+def test_survivors_solved_on_another_core_are_the_same(monkeypatch: pytest.MonkeyPatch) -> None:
+    problem = everything()
+    alone = solve(problem)
+    monkeypatch.setattr(recursion, "WORTH_SHARING", 0)
+    shares: list[float] = []
+    policy = solve(problem, progress=shares.append)
+    for name in ("level", "gross", "slopes", "portfolio"):
+        np.testing.assert_array_equal(getattr(policy, name), getattr(alone, name))
+    for ours, theirs in zip(policy.surfaces, alone.surfaces, strict=True):
+        for mine, other in zip(ours, theirs, strict=True):
+            np.testing.assert_array_equal(mine.numbers, other.numbers)
+    assert shares == sorted(shares)
+    assert shares[-1] == 1.0
 
 
 @pytest.mark.parametrize("name", HOUSEHOLDS)

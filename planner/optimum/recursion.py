@@ -11,11 +11,13 @@ spending, so that the kink of the year's utility does not become a kink of C in 
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 
+from planner.beside import is_copy, shared
 from planner.optimum.expectation import GrowthMaps, expected_value, growth_maps
 from planner.optimum.grids import CashGrid, LogGrid, derivative_matrix, limited_slopes, plausible_slopes
 from planner.optimum.inner import TINY_SLOPE, Continuation, Felicity, cash_table
@@ -24,7 +26,9 @@ from planner.optimum.policy import OptimalPolicy
 from planner.optimum.surface import Surface
 from planner.piecewise import FloatArray
 from planner.preferences import SpendingUtility
-from planner.problem import Problem
+from planner.problem import IntArray, Problem
+
+WORTH_SHARING = 40_000  # nodes times years of a status, below which a copy costs more than it saves
 
 
 @dataclass(frozen=True, slots=True)
@@ -120,6 +124,9 @@ def solve(
 ) -> OptimalPolicy:
     """Solve the household's problem by backward induction.
 
+    A survivor's years need nothing of the couple's: they are solved first, on both cores where there
+    are two.
+
     Parameters
     ----------
     progress
@@ -131,80 +138,152 @@ def solve(
         Values and choices on the nodes, for every year and status.
     """
     settings = settings or SolverSettings.for_problem(problem)
-    grids = build_grids(problem, settings)
-    shape = (grids[0].size, grids[1].size, grids[2].size)
+    work = _Induction(problem, settings)
     n_years, n_statuses = problem.need.shape
-    smooth = replace(problem.utility, shortfall_weight=1.0)
-    weights, later_weights = value_weights(problem)
-    low, high = cash_range(problem, grids)
-    slopes = [derivative_matrix(grid.nodes) for grid in grids]
-    level = np.zeros((n_years, n_statuses, *shape))
-    gross = np.zeros_like(level)
-    found = np.zeros((n_years, n_statuses, 3, *shape))
-    surfaces: list[list[Surface]] = [[] for _ in range(n_years)]
-    situations = [[situation_of(problem, t, h) for h in range(n_statuses)] for t in range(n_years)]
-    portfolio = np.zeros(level.shape, dtype=np.int64)
-    maps: dict[tuple[float, ...], GrowthMaps] = {}
-    cash_grids: dict[float, CashGrid] = {}
-    places = np.arange(portfolio[0, 0].size).reshape(shape)
+    done = 0
 
-    for t in range(n_years - 1, -1, -1):
-        expected: dict[tuple[int, tuple[float, ...]], tuple[FloatArray, FloatArray]] = {}
-        for h in range(n_statuses):
-            paid = tuple(problem.contribution[t, h].tolist())
-            if paid not in maps:
-                maps[paid] = growth_maps(problem, grids, problem.contribution[t, h])
-            total = problem.death[t, h] * maps[paid].estate
-            total2 = problem.death[t, h] * maps[paid].estate2
-            for following in np.flatnonzero(problem.transition[t, h] > 0) if t + 1 < n_years else ():
-                key = (int(following), paid)
-                if key not in expected:
-                    expected[key] = expected_value(
-                        problem, maps[paid], level[t + 1, following], found[t + 1, following, 1], smooth
-                    )
-                chance = problem.transition[t, h, following] * weights[t + 1, following]
-                total = total + chance * expected[key][0]
-                total2 = total2 + chance * expected[key][1]
-            best = total.argmax(axis=0)
-            portfolio[t, h] = best
-            held = best * best.size + places
-            later, later2 = total.take(held), total2.take(held)
+    def after_year() -> None:
+        nonlocal done
+        done += 1
+        if progress is not None and not is_copy():
+            progress(done / (n_years * n_statuses))
 
-            felicity = Felicity(problem.utility, smooth, float(problem.need[t, h]), problem.ceiling)
-            following_level = _continuation(
-                later, later2, float(later_weights[t, h]), problem.discount, smooth, slopes, grids
-            )
-            kink = felicity.need * problem.utility.essential
-            if kink not in cash_grids:
-                cash_grids[kink] = CashGrid.build(settings.cash, grids[0].scale, low, high, kink)
-            table = cash_table(
-                following_level,
-                felicity,
-                cash_grids[kink],
-                grids[0].nodes,
-                grids[2].nodes,
-                float(weights[t, h]),
-            )
-            surface = Surface(table, felicity, grids[1], grids[2], slopes[1], slopes[2], problem.conversions)
-            choice = best_on_nodes(surface, grids[0].nodes, situations[t][h])
-            level[t, h] = choice.level
-            gross[t, h] = choice.gross
-            found[t, h] = _slopes(choice, slopes[2], grids)
-            surfaces[t].append(surface)
-        if progress is not None:
-            progress((n_years - t) / n_years)
+    moves = np.asarray(problem.transition.any(axis=0))  # (n_statuses, n_statuses)
+    worth_it = n_years * np.prod(work.shape) >= WORTH_SHARING
+    solved: dict[int, _StatusSolution] = {}
+    while len(solved) < n_statuses:
+        ready = [
+            h
+            for h in range(n_statuses)
+            if h not in solved and all(int(k) in solved or k == h for k in np.flatnonzero(moves[h]))
+        ]
+        jobs = [partial(work.solve_status, h, solved, after_year) for h in ready]
+        found = _on_both_cores(jobs) if len(jobs) > 1 and worth_it else [job() for job in jobs]
+        solved |= dict(zip(ready, found, strict=True))
+        done = len(solved) * n_years
+    rows = [solved[h] for h in range(n_statuses)]
     return OptimalPolicy(
-        grids=grids,
-        level=level,
-        gross=gross,
-        slopes=found,
-        surfaces=tuple(tuple(row) for row in surfaces),
-        situations=tuple(tuple(row) for row in situations),
-        portfolio=portfolio,
-        weights=weights,
-        smooth=smooth,
+        grids=work.grids,
+        level=np.stack([row.level for row in rows], axis=1),
+        gross=np.stack([row.gross for row in rows], axis=1),
+        slopes=np.stack([row.slopes for row in rows], axis=1),
+        surfaces=tuple(zip(*(row.surfaces for row in rows), strict=True)),
+        situations=work.situations,
+        portfolio=np.stack([row.portfolio for row in rows], axis=1),
+        weights=work.weights,
+        smooth=work.smooth,
         utility=problem.utility,
     )
+
+
+def _on_both_cores(jobs: Sequence[Callable[[], _StatusSolution]]) -> list[_StatusSolution]:
+    with shared(jobs) as work:
+        return work.results()
+
+
+# E[g(C)] next year and its slope along tax-deferred, for each portfolio.
+Expected = tuple[FloatArray, FloatArray]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _StatusSolution:
+    """One status solved for all years; arrays as in OptimalPolicy, without the axis of statuses.
+
+    Attributes
+    ----------
+    expected : dict
+        By year and contributions: what being in this status in that year is worth the year before.
+    """
+
+    level: FloatArray
+    gross: FloatArray
+    slopes: FloatArray
+    portfolio: IntArray
+    surfaces: tuple[Surface, ...]
+    expected: dict[tuple[int, tuple[float, ...]], Expected]
+
+
+class _Induction:
+    """What all years and statuses of a problem share, and the induction over one status's years."""
+
+    def __init__(self, problem: Problem, settings: SolverSettings) -> None:
+        self.problem = problem
+        self.settings = settings
+        self.grids = build_grids(problem, settings)
+        self.shape = (self.grids[0].size, self.grids[1].size, self.grids[2].size)
+        self.smooth = replace(problem.utility, shortfall_weight=1.0)
+        self.weights, self.later_weights = value_weights(problem)
+        self.range = cash_range(problem, self.grids)
+        self.slopes = [derivative_matrix(grid.nodes) for grid in self.grids]
+        years, statuses = (range(n) for n in problem.need.shape)
+        self.situations = tuple(tuple(situation_of(problem, t, h) for h in statuses) for t in years)
+        self.maps: dict[tuple[float, ...], GrowthMaps] = {}
+        self.cash_grids: dict[float, CashGrid] = {}
+
+    def solve_status(
+        self, h: int, solved: dict[int, _StatusSolution], after_year: Callable[[], None]
+    ) -> _StatusSolution:
+        """Solve all years of status h, given the statuses that it may move to."""
+        n_years = self.problem.n_years
+        level, gross = np.zeros((2, n_years, *self.shape))
+        slopes = np.zeros((n_years, 3, *self.shape))
+        portfolio = np.zeros(level.shape, dtype=np.int64)
+        surfaces: list[Surface] = []
+        own = _StatusSolution(level, gross, slopes, portfolio, (), {})
+        for t in range(n_years - 1, -1, -1):
+            later, later2 = self._expected_later(t, h, {**solved, h: own})
+            best = later.argmax(axis=0)
+            held = best * best.size + np.arange(best.size).reshape(self.shape)
+            surface = self._surface(t, h, later.take(held), later2.take(held))
+            choice = best_on_nodes(surface, self.grids[0].nodes, self.situations[t][h])
+            level[t], gross[t], portfolio[t] = choice.level, choice.gross, best
+            slopes[t] = _slopes(choice, self.slopes[2], self.grids)
+            surfaces.append(surface)
+            after_year()
+        return replace(own, surfaces=tuple(reversed(surfaces)))
+
+    def _expected_later(self, t: int, h: int, solved: dict[int, _StatusSolution]) -> Expected:
+        """J and its slope along tax-deferred for each portfolio, (n_portfolios, n1, n2, n3)."""
+        problem = self.problem
+        contribution = problem.contribution[t, h]
+        paid = tuple(contribution.tolist())
+        if paid not in self.maps:
+            self.maps[paid] = growth_maps(problem, self.grids, contribution)
+        growth = self.maps[paid]
+        total, total2 = (problem.death[t, h] * estate for estate in (growth.estate, growth.estate2))
+        for following in np.flatnonzero(problem.transition[t, h] > 0) if t + 1 < problem.n_years else ():
+            status = solved[int(following)]
+            key = (t + 1, paid)
+            if key not in status.expected:
+                level, slope2 = status.level[t + 1], status.slopes[t + 1, 1]
+                status.expected[key] = expected_value(problem, growth, level, slope2, self.smooth)
+            value, value2 = status.expected[key]
+            chance = problem.transition[t, h, following] * self.weights[t + 1, following]
+            total = total + chance * value
+            total2 = total2 + chance * value2
+        return total, total2
+
+    def _surface(self, t: int, h: int, later: FloatArray, later2: FloatArray) -> Surface:
+        """The year's value once the outer choice is fixed, from J at the best portfolio."""
+        problem = self.problem
+        felicity = Felicity(problem.utility, self.smooth, float(problem.need[t, h]), problem.ceiling)
+        weight = float(self.later_weights[t, h])
+        following = _continuation(
+            later, later2, weight, problem.discount, self.smooth, self.slopes, self.grids
+        )
+        kink = felicity.need * problem.utility.essential
+        taxable, deferred, free = self.grids
+        if kink not in self.cash_grids:
+            self.cash_grids[kink] = CashGrid.build(self.settings.cash, taxable.scale, *self.range, kink)
+        table = cash_table(
+            following,
+            felicity,
+            self.cash_grids[kink],
+            taxable.nodes,
+            free.nodes,
+            float(self.weights[t, h]),
+        )
+        return Surface(table, felicity, deferred, free, self.slopes[1], self.slopes[2], problem.conversions)
 
 
 def _slopes(choice: OuterChoice, along3: FloatArray, grids: tuple[LogGrid, LogGrid, LogGrid]) -> FloatArray:
