@@ -248,11 +248,10 @@ def main_loss(problem: Problem, best: Paths, other: Paths, early_years: int = 10
     str
         The reason with the largest sum; "" where nothing is lost.
     """
-    need = need_on_paths(problem, best)
     losses = dict.fromkeys((BILLS, TOO_LITTLE_EARLY, TOO_LITTLE_LATE, LEAVES_LESS), 0.0)
     for t in range(best.n_years):
         here = np.flatnonzero(best.alive[:, t] & (other.spending[:, t] < best.spending[:, t]))
-        n = need[here, t]
+        n = problem.need[t].take(best.status[here, t])
         value = problem.utility.value
         lost = value(best.spending[here, t] / n) - value(other.spending[here, t] / n)
         lost = problem.discount**t * n * lost
@@ -333,7 +332,10 @@ def percentiles(values: FloatArray, levels: Sequence[float] = LEVELS) -> Percent
         return Percentiles(tuple(levels), nothing, nothing.copy(), np.array(0))
     spread = np.sqrt(wanted * (1 - wanted) / n)
     around = np.stack([wanted, np.maximum(wanted - spread, 0.0), np.minimum(wanted + spread, 1.0)])
-    middle, low, high = np.interp(around * (n - 1), np.arange(n), np.sort(values))
+    place, in_order = around * (n - 1), np.sort(values)
+    below = np.minimum(place.astype(np.int64), max(n - 2, 0))
+    left, right = in_order[below], in_order[np.minimum(below + 1, n - 1)]
+    middle, low, high = left + (place - below) * (right - left)
     return Percentiles(tuple(levels), middle, (high - low) / 2, np.array(n))
 
 
@@ -357,11 +359,16 @@ def largest_cut(spending: FloatArray, need: FloatArray, alive: BoolArray) -> Flo
     1 - (c_{t+1} / n_{t+1}) / (c_t / n_t), at least 0: spending at an unchanged need scale, so a
     survivor's smaller need is no cut. Years that follow spending of nothing are left out.
     """
+    largest = np.zeros(spending.shape[0])
+    # Year by year, so that what is worked on stays in the processor's cache.
     with np.errstate(divide="ignore", invalid="ignore"):
-        level = spending / need
-        cut = 1 - level[:, 1:] / level[:, :-1]
-    counts = alive[:, 1:] & alive[:, :-1] & (spending[:, :-1] > HALF_CENT)
-    return np.where(counts, cut, 0.0).max(axis=1, initial=0.0)
+        before = spending[:, 0] / need[:, 0]
+        for t in range(1, spending.shape[1]):
+            level = spending[:, t] / need[:, t]
+            counts = alive[:, t] & alive[:, t - 1] & (spending[:, t - 1] > HALF_CENT)
+            np.maximum(largest, 1 - level / before, out=largest, where=counts)
+            before = level
+    return largest
 
 
 def exhausted_year(balances: FloatArray, alive: BoolArray) -> IntArray:
