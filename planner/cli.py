@@ -618,11 +618,11 @@ def main() -> None:
     """
     for variable in ("OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
         os.environ.setdefault(variable, "1")
-    _keep_freed_memory()
+    keep_freed_memory()
     app()
 
 
-def _keep_freed_memory() -> None:
+def keep_freed_memory() -> None:
     """Ask the GNU C library to keep the memory of freed arrays for the next ones.
 
     By default it gives large ones back to the system and gets them again, cleared page by page

@@ -26,8 +26,10 @@ class Continuation:
 
     Attributes
     ----------
+    worth, unit : ndarray of shape (n2, n1, n3)
+        beta J on the nodes of (tax-deferred, taxable, tax-free), and what one unit of the level adds.
     level : ndarray of shape (n2, n1, n3)
-        g^-1(J / weight) on the nodes of (tax-deferred, taxable, tax-free).
+        g^-1(J / A_J).
     slope1 : ndarray of shape (n2, n1, n3)
         Its slope along taxable.
     slope2 : ndarray of shape (n2, n1, n3)
@@ -38,6 +40,8 @@ class Continuation:
         beta A_J: weight of J, discounting included; 0 where nothing follows.
     """
 
+    worth: FloatArray
+    unit: FloatArray
     level: FloatArray
     slope1: FloatArray
     slope2: FloatArray
@@ -146,8 +150,7 @@ def cash_table(
     n2, n1, n3 = following.level.shape
     m = grid.nodes
     shape = (n2, m.size, n3)
-    worth, unit = smooth.value_and_marginal(following.level)
-    worth, unit = w * worth, w * unit
+    worth, unit = following.worth, following.unit
     price2 = unit * following.slope2
 
     in_taxable = _Kept.of(following.level, following.slope1, following.slope2, unit, taxable, felicity)
@@ -176,8 +179,7 @@ def cash_table(
     # Some cash is left in taxable.
     some = np.flatnonzero(index >= 0)
     if some.size:
-        rows = (np.arange(n2) * n1 * n3)[:, None, None] + np.arange(n3)
-        row = np.broadcast_to(rows, shape).reshape(-1).take(some)
+        row = some // (m.size * n3) * (n1 * n3) + some % n3
         found = _keep_some(spending.take(some), index.take(some), row, in_taxable, felicity, w)
         for numbers, new in zip(choice, found, strict=True):
             numbers.reshape(-1)[some] = new

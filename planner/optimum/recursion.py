@@ -314,18 +314,14 @@ def _continuation(
 ) -> Continuation:
     """Level and slopes of J, in the inner choice's axis order (tax-deferred, taxable, tax-free)."""
     if weight == 0.0:
-        level, slope2 = np.zeros(later.shape), np.zeros(later.shape)
+        worth, unit, level, slope2 = np.zeros((4, *later.shape))
     else:
-        level = smooth.inverse(later / weight)
-        slope2 = later2 / (weight * smooth.marginal(level))
+        level, unit = smooth.inverse_and_marginal(later / weight)
+        slope2 = later2 / (weight * unit)
+        worth, unit = discount * later, discount * weight * unit
     slope1 = limited_slopes(_across(slopes[0], level), level, grids[0].nodes)
     at_zero = level[0].T  # (n3, n2): along tax-free where taxable is used up
     slope3 = limited_slopes(slopes[2] @ at_zero, at_zero, grids[2].nodes)
     first = (1, 0, 2)
-    return Continuation(
-        np.ascontiguousarray(level.transpose(first)),
-        np.ascontiguousarray(slope1.transpose(first)),
-        np.ascontiguousarray(slope2.transpose(first)),
-        slope3.T,
-        discount * weight,
-    )
+    turned = [np.ascontiguousarray(a.transpose(first)) for a in (worth, unit, level, slope1, slope2)]
+    return Continuation(turned[0], turned[1], turned[2], turned[3], turned[4], slope3.T, discount * weight)
