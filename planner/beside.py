@@ -21,6 +21,7 @@ from typing import Generic, TypeVar
 T = TypeVar("T")
 
 _is_copy = False  # in this process: it makes no copies of its own
+_has_help = False  # in this process: it shares the work that it is doing with a copy already
 
 MOST_JOBS = 255
 """A job's number is one byte in the pipe, which is read whole or not at all."""
@@ -61,13 +62,22 @@ class Shared(Generic[T]):
         if self._copy:
             while (number := self._next()) is not None:
                 on_job(number)
-                self._done[number] = self._jobs[number]()
+                self._done[number] = self._with_help(number)
             self._done |= self._answer()
         for number, job in enumerate(self._jobs):
             if number not in self._done:
                 on_job(number)
                 self._done[number] = job()
         return [self._done[number] for number in range(len(self._jobs))]
+
+    def _with_help(self, number: int) -> T:
+        """Do a job while the copy does others: there is no core left for what could be shared within it."""
+        global _has_help
+        before, _has_help = _has_help, True
+        try:
+            return self._jobs[number]()
+        finally:
+            _has_help = before
 
     def close(self) -> None:
         """End the copy, whatever it is doing."""
@@ -161,11 +171,11 @@ def is_copy() -> bool:
 
 
 def may_copy() -> bool:
-    """Whether a copy is safe and of use: Linux, a second core, no other thread in this process.
+    """Whether a copy is safe and of use: Linux, an idle second core, no other thread in this process.
 
     A fork copies only the thread that calls it: locks held by others would stay locked. Workers of a
     client list have a thread of their own, and so stay alone on their core.
     """
-    if _is_copy:
+    if _is_copy or _has_help:
         return False
     return sys.platform == "linux" and threading.active_count() == 1 and len(os.sched_getaffinity(0)) > 1

@@ -8,14 +8,16 @@ as well off as with the change (0 for the client as given).
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from math import floor
 from typing import ClassVar
 
 import numpy as np
 
 from planner import outcomes
+from planner.beside import shared
 from planner.diagnostics import InputError
 from planner.household import AccountType, Household, Income, IncomeKind
 from planner.optimum.policy import OptimalPolicy
@@ -85,17 +87,22 @@ def decisions(
     report = progress or (lambda share, what: None)
     report(0.0, "the plan as given")
     search = _Search(solve_household(household, settings), settings)
-    curves: list[DecisionCurve] = []
-    left_out: list[str] = []
     searches = (_start_ages, _annuity, _conversions, _portfolios, _longer_work, _earliest_stop)
-    for number, run in enumerate(searches):
-        report((1 + number) / (1 + len(searches)), run.__name__.strip("_").replace("_", " "))
-        for found in run(search):
-            if isinstance(found, str):
-                left_out.append(found)
-            else:
-                curves.append(found)
-    return tuple(curves), tuple(left_out)
+
+    def say(number: int) -> None:
+        what = searches[number].__name__.strip("_").replace("_", " ")
+        report((1 + number) / (1 + len(searches)), what)
+
+    with shared([partial(_all_found, run, search) for run in searches]) as work:
+        found = [one for several in work.results(say) for one in several]
+    curves = tuple(one for one in found if not isinstance(one, str))
+    return curves, tuple(one for one in found if isinstance(one, str))
+
+
+def _all_found(
+    run: Callable[[_Search], Iterator[DecisionCurve | str]], search: _Search
+) -> list[DecisionCurve | str]:
+    return list(run(search))
 
 
 class _Search:
