@@ -4,10 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 
 from planner import outcomes
+from planner.beside import shared
 from planner.household import Household
 from planner.plan import PlanSettings, Progress, solve_household
 from planner.plan_record import Range
@@ -81,14 +83,17 @@ def _ladder(
     settings: PlanSettings,
     progress: Progress | None,
 ) -> tuple[Rung, ...]:
-    rungs = []
-    for number, value in enumerate(values):
-        if progress is not None:
-            progress(number / len(values), f"{field.replace('_', ' ')} {value:g}")
+    def rung(value: float) -> Rung:
         wishes = replace(household.preferences, **{field: value})  # type: ignore[arg-type]
         solved = solve_household(replace(household, preferences=wishes), settings)
-        rungs.append(_rung(value, value == own, solved.problem, solved.paths))
-    return tuple(rungs)
+        return _rung(value, value == own, solved.problem, solved.paths)
+
+    def report(number: int) -> None:
+        if progress is not None:
+            progress(number / len(values), f"{field.replace('_', ' ')} {values[number]:g}")
+
+    with shared([partial(rung, value) for value in values]) as work:
+        return tuple(work.results(report))
 
 
 def bad_case_year(problem: Problem) -> int:

@@ -15,6 +15,7 @@ from typing import ClassVar, Literal
 import numpy as np
 
 from planner import outcomes
+from planner.beside import shared
 from planner.diagnostics import InputError
 from planner.household import Household
 from planner.optimum.policy import OptimalPolicy
@@ -115,16 +116,19 @@ def stress_tests(
     report = progress or (lambda share, what: None)
     report(0.0, "the plan as given")
     solved = solve_household(household, settings)
-    results = [StressResult("as planned", "as given", _measured(solved, solved.policy, solved.paths), True)]
+    as_planned = StressResult("as planned", "as given", _measured(solved, solved.policy, solved.paths), True)
     cut_year = household.plan_date.year + PENSION_CUT_AFTER if pension_cut_year is None else pension_cut_year
     stresses = [*_assumptions(household), *_events(solved, settings), *_later_changes(solved, cut_year)]
-    for number, (name, run) in enumerate(stresses):
-        report((1 + number) / (1 + len(stresses)), name)
+
+    def result(run: Run) -> StressResult | None:
         try:
-            results.append(run(solved, settings))
+            return run(solved, settings)
         except InputError:
-            continue  # the stress makes a household that cannot be (a rate below its limits, say)
-    return solved, tuple(results)
+            return None  # the stress makes a household that cannot be (a rate below its limits, say)
+
+    with shared([partial(result, run) for _, run in stresses]) as work:
+        found = work.results(lambda number: report((1 + number) / (1 + len(stresses)), stresses[number][0]))
+    return solved, (as_planned, *(one for one in found if one is not None))
 
 
 Run = Callable[[Solved, PlanSettings], StressResult]
