@@ -91,7 +91,7 @@ class PlanSettings:
 
     n_paths: int = 20_000
     n_what_if_paths: int = 2_000
-    n_proof_paths: int = 300
+    n_proof_paths: int = 600
     seed: int = 20260101
     solver: SolverSettings | None = None
     what_if_solver: SolverSettings | None = None

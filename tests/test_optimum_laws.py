@@ -177,6 +177,14 @@ def test_no_rule_beats_the_optimum(name: str) -> None:
 # More is better, and scale does not matter ----------------------------------------------------------
 
 
+def test_a_status_that_comes_back_is_refused() -> None:
+    problem = everything(4)
+    transition = problem.transition.copy()
+    transition[1, 1, 0] = 0.1  # a survivor who is a couple again
+    with pytest.raises(ValueError, match="lead back"):
+        solve(replace(problem, transition=transition))
+
+
 def test_survivors_solved_on_another_core_are_the_same(monkeypatch: pytest.MonkeyPatch) -> None:
     problem = everything()
     alone = solve(problem)

@@ -136,6 +136,11 @@ def solve(
     -------
     OptimalPolicy
         Values and choices on the nodes, for every year and status.
+
+    Raises
+    ------
+    ValueError
+        A status can be left and come back to.
     """
     settings = settings or SolverSettings.for_problem(problem)
     work = _Induction(problem, settings)
@@ -157,6 +162,8 @@ def solve(
             for h in range(n_statuses)
             if h not in solved and all(int(k) in solved or k == h for k in np.flatnonzero(moves[h]))
         ]
+        if not ready:
+            raise ValueError("statuses lead back to one another")
         jobs = [partial(work.solve_status, h, solved, after_year) for h in ready]
         found = _on_both_cores(jobs) if len(jobs) > 1 and worth_it else [job() for job in jobs]
         solved |= dict(zip(ready, found, strict=True))

@@ -12,7 +12,7 @@ import sys
 import time
 from dataclasses import replace
 
-from samples import machine, sample_problems
+from samples import machine, on_one_core, sample_problems
 from speed import one_account
 
 import numpy as np  # isort: skip
@@ -62,6 +62,7 @@ def main() -> None:
     if sys.argv[1:] == ["one-account"]:
         report_one_account(settings)
         return
+    on_one_core()
     print(f"{machine()}; {settings.n_proof_paths} paths")
     print(f"| Client | Gap | Standard error | {' | '.join(TERMS)} | Seconds |")
     print("|---" * (4 + len(TERMS)) + "|", flush=True)

@@ -11,7 +11,7 @@ from __future__ import annotations
 import sys
 import time
 
-from samples import machine, sample_problems
+from samples import machine, on_one_core, sample_problems
 
 from planner.optimum.recursion import SolverSettings, solve
 from planner.problem import Problem
@@ -29,6 +29,7 @@ def measured(problem: Problem, factor: float) -> tuple[float, float, float]:
 
 def main() -> None:
     """Print a row for each sample client."""
+    on_one_core()
     print(machine())
     print("| Client | Value, default | Value, 2x | Spending, default | Spending, 2x | Seconds 1x, 2x, 3x |")
     print("|---|---|---|---|---|---|", flush=True)

@@ -13,6 +13,7 @@ from pathlib import Path
 
 import numpy as np
 
+from planner.cli import keep_freed_memory
 from planner.problem import Problem
 from planner.problem_building import build_problem
 from planner.workbook.reading import read_workbook
@@ -25,6 +26,13 @@ def sample_problems(wanted: list[str] | None = None) -> Iterator[tuple[str, Prob
     for path in sorted(FOLDER.glob("*.xlsx")):
         if path.stem != "broken" and (not wanted or path.stem in wanted):
             yield path.stem, build_problem(read_workbook(path).household)
+
+
+def on_one_core() -> None:
+    """Leave the second core out, so that processor time is all there is; keep memory as the planner does."""
+    if hasattr(os, "sched_setaffinity"):
+        os.sched_setaffinity(0, {min(os.sched_getaffinity(0))})
+    keep_freed_memory()
 
 
 def machine() -> str:

@@ -20,12 +20,11 @@ from dataclasses import replace
 from functools import partial
 from pathlib import Path
 
-from samples import FOLDER, machine, sample_problems
+from samples import FOLDER, machine, on_one_core, sample_problems
 
 import numpy as np  # isort: skip
 from openpyxl import load_workbook  # isort: skip
 
-from planner.cli import keep_freed_memory
 from planner.markets import lognormal_returns
 from planner.optimum.bound import prove
 from planner.optimum.recursion import SolverSettings, solve
@@ -205,8 +204,8 @@ def report_couple() -> None:
     with_them = replace(problem, conversions=True)
     row("the same with conversions", seconds(lambda: solve(with_them), 2), "target 3 s")
     policy = solve(problem)
-    took = seconds(lambda: prove(problem, policy, 300, np.random.default_rng(1)), 2)
-    row("the same: prove on 300 paths", took, "")
+    took = seconds(lambda: prove(problem, policy, 600, np.random.default_rng(1)), 2)
+    row("the same: prove on 600 paths", took, "")
 
 
 def save_with_one_account(client: Path, to: Path) -> None:
@@ -309,9 +308,7 @@ def main() -> None:
     print("| What | Seconds of one core | |")
     print("|---|---|---|")
     report_commands()  # first: a child's memory counts from what its parent has
-    if hasattr(os, "sched_setaffinity"):
-        os.sched_setaffinity(0, {min(os.sched_getaffinity(0))})  # so that the second core takes no part
-    keep_freed_memory()
+    on_one_core()
     report_one_account()
     report_couple()
     report_parts()
