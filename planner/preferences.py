@@ -165,9 +165,10 @@ class SpendingUtility:
         m = np.asarray(m, dtype=np.float64)
         with np.errstate(divide="ignore"):
             z = (m * self.essential) ** (-1 / self.risk_aversion)
-            low = z * self.shortfall_weight ** (1 / self.risk_aversion)
-        x = self.essential * np.where(z >= 1, z, np.minimum(low, 1.0))
-        return np.asarray(np.maximum(x, self.floor))
+        if self.shortfall_weight != 1:
+            # Below E spending is larger by a factor, but not above E.
+            z = np.maximum(z, np.minimum(z * self.shortfall_weight ** (1 / self.risk_aversion), 1.0))
+        return np.asarray(np.maximum(self.essential * z, self.floor))
 
 
 @dataclass(frozen=True, slots=True)

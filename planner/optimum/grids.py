@@ -163,9 +163,11 @@ def _chords(values: FloatArray, nodes: FloatArray) -> tuple[FloatArray, FloatArr
     """Flatter and steeper of the chords on either side of each node of axis 0."""
     gaps = (nodes[1:] - nodes[:-1]).reshape((-1,) + (1,) * (values.ndim - 1))
     chords = (values[1:] - values[:-1]) / gaps
-    left = np.concatenate([chords[:1], chords])
-    right = np.concatenate([chords, chords[-1:]])
-    flatter, steeper = np.minimum(left, right), np.maximum(left, right)
+    flatter, steeper = np.empty((2, *values.shape))
+    for either in (flatter, steeper):
+        either[0], either[-1] = chords[0], chords[-1]
+    np.minimum(chords[1:], chords[:-1], out=flatter[1:-1])
+    np.maximum(chords[1:], chords[:-1], out=steeper[1:-1])
     # The last node has one chord; a concave function is flatter there.
     flatter[-1] *= 0.5
     return flatter, steeper

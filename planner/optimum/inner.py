@@ -177,7 +177,7 @@ def cash_table(
     deferred[:] = price2[:, :1]
 
     # Some cash is left in taxable.
-    some = np.flatnonzero(index >= 0)
+    some = (index.reshape(-1) >= 0).nonzero()[0]
     if some.size:
         row = some // (m.size * n3) * (n1 * n3) + some % n3
         found = _keep_some(spending.take(some), index.take(some), row, in_taxable, felicity, w)
@@ -205,7 +205,7 @@ def cash_table(
     later /= weight
     table, unit = smooth.inverse_and_marginal(later)
     unit = weight * unit
-    slope = np.minimum(marginal / unit, _steepest(table, m))
+    slope = np.minimum(marginal / unit, _steepest(table, grid))
     return CashTable(grid, table, slope, deferred / unit, spending)
 
 
@@ -251,14 +251,15 @@ def _left_of_kink(money: FloatArray, grid: CashGrid) -> FloatArray:
     return money
 
 
-def _steepest(level: FloatArray, nodes: FloatArray) -> FloatArray:
+def _steepest(level: FloatArray, grid: CashGrid) -> FloatArray:
     """Largest slope along axis 1 with which Hermite interpolation stays monotone: three chords.
 
     The doubled node has one chord on each side. See `grids.limited_slopes`.
     """
-    gaps = nodes[1:] - nodes[:-1]
-    chords = (level[:, 1:] - level[:, :-1]) / np.where(gaps > 0, gaps, 1.0)[:, None]
-    chords[:, gaps == 0] = np.inf
+    gaps = grid.nodes[1:] - grid.nodes[:-1]
+    gaps[grid.kink] = 1.0
+    chords = (level[:, 1:] - level[:, :-1]) / gaps[:, None]
+    chords[:, grid.kink] = np.inf
     flattest = np.empty_like(level)
     flattest[:, 0], flattest[:, -1] = chords[:, 0], chords[:, -1]
     np.minimum(chords[:, 1:], chords[:, :-1], out=flattest[:, 1:-1])

@@ -258,14 +258,16 @@ class _Induction:
             self.maps[paid] = growth_maps(problem, self.grids, contribution)
         growth = self.maps[paid]
         total, total2 = (problem.death[t, h] * estate for estate in (growth.estate, growth.estate2))
-        for following in np.flatnonzero(problem.transition[t, h] > 0) if t + 1 < problem.n_years else ():
-            status = solved[int(following)]
+        for following, possible in enumerate(problem.transition[t, h].tolist()):
+            if possible <= 0 or t + 1 == problem.n_years:
+                continue
+            status = solved[following]
             key = (t + 1, paid)
             if key not in status.expected:
                 level, slope2 = status.level[t + 1], status.slopes[t + 1, 1]
                 status.expected[key] = expected_value(problem, growth, level, slope2, self.smooth)
             value, value2 = status.expected[key]
-            chance = problem.transition[t, h, following] * self.weights[t + 1, following]
+            chance = possible * self.weights[t + 1, following]
             total = total + chance * value
             total2 = total2 + chance * value2
         return total, total2
