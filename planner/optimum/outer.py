@@ -366,13 +366,25 @@ def _node_levels(
     else:
         first = j[None, :, None] * n_cash
     cell = grid.cell(money)
-    ((h0, h1), (g0, g1)), _ = hermite_basis(money, grid.nodes[cell], grid.nodes[cell + 1], False)
-    row = first + cell
+    ((h0, h1), (g0, g1)), _ = hermite_basis(
+        money, grid.nodes.take(cell), grid.nodes.take(cell + 1), with_slopes=False
+    )
+    cell += first
+    cell *= n3
+    cell += np.arange(n3)
+    # Indices are within range by construction; mode "clip" saves numpy a copy.
+    value = h0 * levels.take(cell, mode="clip")
+    value += g0 * slopes.take(cell, mode="clip")
+    cell += n3
+    value += h1 * levels.take(cell, mode="clip")
+    value += g1 * slopes.take(cell, mode="clip")
 
-    at, after = row * n3 + np.arange(n3), (row + 1) * n3 + np.arange(n3)
-    value = h0 * levels[at] + g0 * slopes[at] + h1 * levels[after] + g1 * slopes[after]
-    full = np.full((n1, n2, n2, n3), -np.inf)
-    full[:, a, j, :] = value
-    best = full.argmax(axis=2)
-    top = np.take_along_axis(full, best[:, :, None, :], axis=2)[:, :, 0, :]
-    return top, nodes2[None, :, None] - nodes2[best]
+    # Pairs are in the order of a: the best of each segment, and the least node left that reaches it.
+    count = feasible.sum(axis=1)
+    some = np.flatnonzero(count)
+    starts = np.cumsum(count[some]) - count[some]
+    top, left = np.full((n1, n2, n3), -np.inf), np.zeros((n1, n2, n3), dtype=np.int64)
+    top[:, some] = np.maximum.reduceat(value, starts, axis=1)
+    reached = value == np.repeat(top[:, some], count[some], axis=1)
+    left[:, some] = np.minimum.reduceat(np.where(reached, j[:, None], n2), starts, axis=1)
+    return top, nodes2[:, None] - nodes2[left]
