@@ -12,7 +12,7 @@ import signal
 import sys
 import threading
 from collections.abc import Callable, Iterator, Sequence
-from contextlib import contextmanager, suppress
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, TypeVar
 
@@ -21,6 +21,7 @@ from rich.console import Console
 from rich.markup import escape
 
 from planner.diagnostics import Diagnostic, InputError, PlannerError
+from planner.memory import keep_freed_memory
 
 if TYPE_CHECKING:
     from planner.commands.answers import Answer
@@ -620,22 +621,6 @@ def main() -> None:
         os.environ.setdefault(variable, "1")
     keep_freed_memory()
     app()
-
-
-def keep_freed_memory() -> None:
-    """Ask the GNU C library to keep the memory of freed arrays for the next ones.
-
-    By default it gives large ones back to the system and gets them again, cleared page by page
-    (measured: a tenth of the time of a plan). Elsewhere nothing is changed.
-    """
-    if sys.platform == "linux":
-        import ctypes
-
-        trim_threshold, mmap_threshold = -1, -3  # malloc.h
-        with suppress(OSError, AttributeError):
-            library = ctypes.CDLL(None)
-            library.mallopt(mmap_threshold, 32 << 20)
-            library.mallopt(trim_threshold, 512 << 20)
 
 
 if __name__ == "__main__":

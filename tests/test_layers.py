@@ -47,7 +47,7 @@ LAYERS = (
     ("planner.household",),
     ("planner.checks", "planner.codes", "planner.shipped", "planner.files", "planner.rule_terms"),
     ("planner.soa_tables",),
-    ("planner.piecewise", "planner.diagnostics", "planner.data", "planner.beside"),
+    ("planner.piecewise", "planner.diagnostics", "planner.data", "planner.beside", "planner.memory"),
     ("planner",),
 )
 EXCEPTIONS = {

@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING
 
 from planner import __version__
 from planner.diagnostics import InputError, PlannerError
+from planner.memory import keep_freed_memory
 
 if TYPE_CHECKING:
     from planner.clients.rows import ChangedFigures, ClientRow
@@ -90,6 +91,7 @@ def start_worker() -> None:
 
     for variable in THREAD_VARIABLES:
         os.environ.setdefault(variable, "1")
+    keep_freed_memory()
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     threading.Thread(target=_end_with_parent, daemon=True).start()
 

@@ -13,7 +13,7 @@ from pathlib import Path
 
 import numpy as np
 
-from planner.cli import keep_freed_memory
+from planner.memory import keep_freed_memory
 from planner.problem import Problem
 from planner.problem_building import build_problem
 from planner.workbook.reading import read_workbook
