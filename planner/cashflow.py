@@ -68,11 +68,8 @@ def by_status(status: IntArray, n_statuses: int) -> Iterator[tuple[int, slice | 
     """Each status that occurs, with the paths in it: a slice where all are, which spares copies."""
     for h in range(n_statuses):
         here = np.flatnonzero(status == h)
-        if here.size == status.size:
-            yield h, slice(None)
-            return
         if here.size:
-            yield h, here
+            yield h, slice(None) if here.size == status.size else here
 
 
 @dataclass(frozen=True, slots=True, eq=False)

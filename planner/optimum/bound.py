@@ -275,7 +275,7 @@ class _Proof:
             expected += (passed[:, :, account] @ self.discounted[:, :, account].T)[:, None, :]
             slack = expected.max(axis=2) - expected[paths, :, decision.portfolio]
             cost += slack.T * choice.left[:, account]
-        return np.exp(TILTS[cost.argmin(axis=0), None] * self.z)
+        return np.exp(TILTS[_least(cost), None] * self.z)
 
     def _expected(self, values: FloatArray) -> FloatArray:
         """E_t[beta values R_p] (n, portfolios, 3) of values (n, q, 3)."""
@@ -345,9 +345,14 @@ class _Proof:
         tried = np.minimum(np.maximum(choice.cash_prices(raw[:, TAXABLE], first), least), most)
         tried = np.concatenate([start[None], tried])
         terms, gained = choice.terms(priced(tried)[0])
-        best = terms.sum(axis=-1).argmin(axis=0)
+        best = _least(terms.sum(axis=-1))
         prices, factors = priced(tried[best, paths])
         return prices, factors, terms[best, paths], gained[best, paths]
+
+
+def _least(costs: FloatArray) -> IntArray:
+    """Index of the least of what was tried (k, n); what is not a number is never the least."""
+    return np.asarray(np.where(np.isnan(costs), np.inf, costs).argmin(axis=0))
 
 
 def _best_estate(problem: Problem, price: FloatArray) -> FloatArray:

@@ -56,7 +56,7 @@ class Expectation:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class YearPrices:
-    """A year's prices in utility per unit of money, on n paths; `of` them several sets to choose from.
+    """A year's prices in utility per unit of money, on n paths, or several sets of them to choose from.
 
     Attributes
     ----------
