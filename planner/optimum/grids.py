@@ -118,7 +118,7 @@ def _node_slopes(local: FloatArray, at: IntArray) -> FloatArray:
     """Weights of the derivative of the Lagrange polynomial on nodes (m, width) at its node `at` (m,).
 
     With barycentric weights b: (b_k / b_i) / (x_i - x_k) off the node, minus their sum on it
-    (Berrut & Trefethen 2004, SIAM Review 46(3) 501-517, section 9.3).
+    (Berrut & Trefethen 2004, SIAM Review 46(3) 501-517; from memory).
     """
     rows = np.arange(at.size)
     gaps = local[:, :, None] - local[:, None, :]
